@@ -1,0 +1,150 @@
+"""Result file `image.h5`, layout version 1: written plane by plane, read back whole."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from types import TracebackType
+from typing import Any, Final, Self
+
+import h5py
+import numpy as np
+from numpy.typing import NDArray
+
+from recon.axes import image_axis
+from recon.caution import CAUTION
+from recon.errors import InvalidScan
+from recon.formats import hdf5
+from recon.scan import PlaneIndex, Scan
+
+LAYOUT: Final = "fallow-image"
+LAYOUT_VERSION: Final = 1
+_GEOMETRY: Final = (
+    "field_of_view_mm",
+    "slice_position_mm",
+    "read_direction",
+    "phase_direction",
+    "slice_direction",
+    "patient_position",
+    "slice_spacing_mm",
+    "frame_interval_ms",
+    "echo_times_ms",
+)
+
+
+@dataclass(frozen=True)
+class ImageFile:
+    """What an `image.h5` holds.
+
+    Attributes
+    ----------
+    image, residual_image : complex64 ndarray
+        In the order of `axes`.
+    axes : tuple of str
+        Labels such as ("slice", "y", "x").
+    report, provenance : dict
+        The consistency report and where the image came from.
+    attributes : dict
+        Geometry of the image.
+    """
+
+    image: NDArray[np.complex64]
+    residual_image: NDArray[np.complex64]
+    axes: tuple[str, ...]
+    report: dict[str, Any]
+    provenance: dict[str, Any]
+    attributes: dict[str, Any]
+
+
+class ImageWriter:
+    """Writes an image file plane by plane, so that memory does not grow with the number of planes.
+
+    Parameters
+    ----------
+    path : path
+        Where to write; give a temporary name and rename when `finish` has returned.
+    scan : Scan
+        Supplies axes and geometry.
+    shape : (rows, columns)
+        Of one image plane.
+    """
+
+    def __init__(self, path: Path | str, scan: Scan, shape: tuple[int, int]) -> None:
+        self._outer = scan.outer_axes
+        sizes = [scan.axes[axis] for axis in self._outer]
+        self._file = h5py.File(path, "w")
+        self._file.attrs.update({"layout": LAYOUT, "layout_version": LAYOUT_VERSION, "caution": CAUTION})
+        for name in ("image", "residual_image"):
+            self._create(name, (*sizes, *shape), scan.image_axes)
+        self._file["image"].attrs.update(geometry(scan))
+
+    def _create(self, name: str, shape: Sequence[int], axes: Sequence[str]) -> None:
+        written = self._file.create_dataset(name, shape, dtype=np.complex64)
+        for position, label in enumerate(axes):
+            written.dims[position].label = label
+
+    def write(self, name: str, index: PlaneIndex, plane: NDArray[np.complex64]) -> None:
+        """Store one plane of `image` or `residual_image`."""
+        where = index._asdict()
+        self._file[name][tuple(where[axis] for axis in self._outer)] = plane
+
+    def finish(self, report: Mapping[str, Any], provenance: Mapping[str, Any]) -> None:
+        """Add the report and close the file; without this call it is not a valid image file."""
+        self._file.attrs["report"] = json.dumps(report, allow_nan=False)
+        self._file.attrs["provenance"] = json.dumps(provenance, allow_nan=False)
+        self._file.close()
+
+    def __enter__(self) -> Self:
+        return self
+
+    def __exit__(
+        self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
+    ) -> None:
+        self._file.close()
+
+
+def geometry(scan: Scan) -> dict[str, Any]:
+    """Geometry attributes of the image: as in the scan, the field of view without readout oversampling."""
+    found = {name: scan.attributes[name] for name in _GEOMETRY if name in scan.attributes}
+    if "field_of_view_mm" in found:
+        x, y, z = found["field_of_view_mm"]
+        found["field_of_view_mm"] = [x / float(scan.attributes.get("readout_oversampling", 1.0)), y, z]
+    return found
+
+
+def voxel_size_mm(scan: Scan, shape: tuple[int, int]) -> tuple[float, float] | None:
+    """Pixel size (row, column) in mm, field of view over matrix; None where the field of view is unknown."""
+    fields = geometry(scan).get("field_of_view_mm")
+    if fields is None:
+        return None
+    by_axis = dict(zip("xyz", fields, strict=True))
+    rows, columns = (image_axis(axis) for axis in scan.plane_axes)
+    return by_axis[rows] / shape[0], by_axis[columns] / shape[1]
+
+
+def read_image(path: Path | str) -> ImageFile:
+    """Read an image file.
+
+    Raises
+    ------
+    InvalidScan
+        When the file is not a complete image file.
+    """
+    with hdf5.open_file(path) as file:
+        if hdf5.text(file.attrs.get("layout")) != LAYOUT or "report" not in file.attrs:
+            raise InvalidScan(f"{Path(path).name} is not a complete {LAYOUT} file; reconstruct the scan again")
+        image = file["image"]
+        return ImageFile(
+            image=image[()],
+            residual_image=file["residual_image"][()],
+            axes=tuple(str(dimension.label) for dimension in image.dims),
+            report=json.loads(file.attrs["report"]),
+            provenance=json.loads(file.attrs["provenance"]),
+            attributes={
+                name: value.tolist() if isinstance(value, np.ndarray) else value
+                for name, value in image.attrs.items()
+                if name in _GEOMETRY
+            },
+        )

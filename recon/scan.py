@@ -1,0 +1,282 @@
+"""The `Scan` record: labelled arrays with their acquisition facts, checked once, read plane by plane."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from itertools import product
+from types import TracebackType
+from typing import Any, NamedTuple, Protocol, Self
+
+import numpy as np
+from numpy.typing import NDArray
+
+from recon.axes import COMPLEX_AXIS, KSPACE_AXES, OUTER_AXES, LabelledArray, image_axis
+from recon.errors import InvalidScan
+from recon.findings import Finding
+
+
+class PlaneIndex(NamedTuple):
+    """Which plane of a scan: position along `frame`, `slice` and `contrast` (0 where the axis is absent)."""
+
+    frame: int = 0
+    slice: int = 0
+    contrast: int = 0
+
+
+class Closeable(Protocol):
+    """A file behind the arrays of a scan."""
+
+    def close(self) -> None: ...
+
+
+@dataclass
+class Scan:
+    """One acquisition. Arrays are read lazily; every method returns canonical axis order.
+
+    Attributes
+    ----------
+    kspace_array : LabelledArray
+        Complex, axes among `frame slice contrast coil` and either `ky kx` or `kz ky`.
+    mask_array : LabelledArray or None
+        Bool, a subset of the k-space axes without `coil`; None: inferred from zeros.
+    noise_array : LabelledArray or None
+        Complex, axes `coil sample`.
+    reference_array : LabelledArray or None
+        Separately acquired calibration k-space, axes `coil`, the plane axes and perhaps `slice`.
+    sensitivity_array : LabelledArray or None
+        Coil maps on the image axes `coil`, the plane's and perhaps `slice`.
+    attributes : mapping
+        Checked attributes of `/kspace` (see `recon.formats.attributes`), lengths in mm, times in ms or as named.
+    noise_attributes : mapping
+        Checked attributes of `/noise`.
+    title, acquired_at, repetition_time_ms
+        Optional root attributes.
+    findings : list of Finding
+        What the reader noticed.
+    """
+
+    kspace_array: LabelledArray
+    mask_array: LabelledArray | None = None
+    noise_array: LabelledArray | None = None
+    reference_array: LabelledArray | None = None
+    sensitivity_array: LabelledArray | None = None
+    attributes: Mapping[str, Any] = field(default_factory=dict)
+    noise_attributes: Mapping[str, Any] = field(default_factory=dict)
+    title: str | None = None
+    acquired_at: str | None = None
+    repetition_time_ms: float | None = None
+    findings: list[Finding] = field(default_factory=list)
+    file: Closeable | None = None
+
+    def __post_init__(self) -> None:
+        validate(self)
+
+    def __enter__(self) -> Self:
+        return self
+
+    def __exit__(
+        self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
+    ) -> None:
+        self.close()
+
+    def close(self) -> None:
+        """Close the file behind the arrays, if there is one."""
+        if self.file is not None:
+            self.file.close()
+
+    @property
+    def axes(self) -> dict[str, int]:
+        """Length of every k-space axis, canonical order."""
+        return self.kspace_array.sizes
+
+    @property
+    def plane_axes(self) -> tuple[str, str]:
+        """The two axes of one plane: (`ky`, `kx`) or (`kz`, `ky`)."""
+        return ("kz", "ky") if "kz" in self.axes else ("ky", "kx")
+
+    @property
+    def plane_shape(self) -> tuple[int, int]:
+        """Rows and columns of one plane of k-space."""
+        rows, columns = self.plane_axes
+        return self.axes[rows], self.axes[columns]
+
+    @property
+    def coils(self) -> int:
+        """Number of receive channels (1 where the axis is absent)."""
+        return self.axes.get("coil", 1)
+
+    @property
+    def outer_axes(self) -> tuple[str, ...]:
+        """Those of `frame slice contrast` that the scan has, in canonical order."""
+        return tuple(axis for axis in OUTER_AXES if axis in self.axes)
+
+    @property
+    def image_axes(self) -> tuple[str, ...]:
+        """Axes of the reconstructed image."""
+        return (*self.outer_axes, *(image_axis(axis) for axis in self.plane_axes))
+
+    def planes(self) -> list[PlaneIndex]:
+        """Every plane, slice by slice, so that the planes which share maps follow each other."""
+        sizes = [self.axes.get(axis, 1) for axis in OUTER_AXES]
+        every = (PlaneIndex(*index) for index in product(*(range(size) for size in sizes)))
+        return sorted(every, key=lambda index: (index.slice, index.frame, index.contrast))
+
+    def planes_of_slice(self, position: int) -> list[PlaneIndex]:
+        """The frames and contrasts of one slice."""
+        return [index for index in self.planes() if index.slice == position]
+
+    def kspace(self, index: PlaneIndex) -> NDArray[np.complex64]:
+        """Read one plane: complex64 of shape (coil, rows, columns)."""
+        part: NDArray[np.complex64] = self.kspace_array.take(**index._asdict())
+        return part if "coil" in self.axes else part[np.newaxis]
+
+    def mask(self, index: PlaneIndex, kspace: NDArray[np.complex64] | None = None) -> NDArray[np.bool_]:
+        """Sampling mask of one plane, broadcast to (rows, columns).
+
+        Without `/mask` a position counts as sampled when any coil holds a value other than zero there; along a
+        readout (`kx`) the whole line is taken, since zeros inside a measured line are values, not gaps.
+        """
+        if self.mask_array is None:
+            data = self.kspace(index) if kspace is None else kspace
+            sampled: NDArray[np.bool_] = np.any(data != 0, axis=0)
+            if self.plane_axes[1] == "kx":
+                sampled = np.broadcast_to(sampled.any(axis=1, keepdims=True), sampled.shape)
+            return sampled
+        part = self.mask_array.take(**index._asdict())
+        left = [axis for axis in self.mask_array.axes if axis not in OUTER_AXES]
+        shape = [self.axes[axis] if axis in left else 1 for axis in self.plane_axes]
+        return np.broadcast_to(part.reshape(shape), self.plane_shape)
+
+    def noise(self) -> NDArray[np.complex64] | None:
+        """Noise-only samples, complex64 of shape (coil, sample), or None."""
+        return None if self.noise_array is None else self.noise_array.take()
+
+    def reference(self, position: int) -> NDArray[np.complex64] | None:
+        """Calibration k-space for one slice, complex64 of shape (coil, rows, columns), or None."""
+        if self.reference_array is None:
+            return None
+        return _with_coil(self.reference_array, self.reference_array.take(slice=position))
+
+    def sensitivity(self, position: int) -> NDArray[np.complex64] | None:
+        """Supplied coil maps for one slice, complex64 of shape (coil, rows, columns), or None."""
+        if self.sensitivity_array is None:
+            return None
+        return _with_coil(self.sensitivity_array, self.sensitivity_array.take(slice=position))
+
+
+def _with_coil(array: LabelledArray, part: NDArray[Any]) -> NDArray[Any]:
+    return part if "coil" in array.axes else part[np.newaxis]
+
+
+def validate(scan: Scan) -> None:
+    """Check names and shapes of everything in a scan against each other.
+
+    Raises
+    ------
+    InvalidScan
+        Naming the object, what was received, what is accepted and what to do.
+    """
+    _check_kspace_axes(scan.kspace_array)
+    sizes = scan.axes
+    plane, image = scan.plane_axes, tuple(image_axis(axis) for axis in scan.plane_axes)
+    if scan.mask_array is not None:
+        accepted = [axis for axis in sizes if axis != "coil"]
+        _check_subset("/mask", scan.mask_array, {axis: sizes[axis] for axis in accepted})
+    if scan.noise_array is not None:
+        _check_noise(scan.noise_array, scan.coils)
+    if scan.reference_array is not None:
+        fixed = {axis: sizes[axis] for axis in ("slice", "coil") if axis in sizes}
+        _check_calibration("/reference", scan.reference_array, fixed, plane)
+    if scan.sensitivity_array is not None:
+        fixed = {axis: sizes[axis] for axis in ("slice", "coil") if axis in sizes}
+        _check_calibration("/sensitivity", scan.sensitivity_array, fixed, image)
+        _check_map_size(scan, scan.sensitivity_array, image)
+
+
+def _check_kspace_axes(array: LabelledArray) -> None:
+    axes = [label for label in array.labels if label != COMPLEX_AXIS]
+    phases = {"kz", "ky", "kx"} & set(axes)
+    if phases not in ({"ky", "kx"}, {"kz", "ky"}):
+        raise InvalidScan(
+            f"/kspace has the axes {', '.join(axes)}; a plane needs exactly ky and kx, or kz and ky (one readout "
+            f"position): label the axes so, out of {', '.join(KSPACE_AXES)}"
+        )
+    for label, size in array.sizes.items():
+        if size == 0:
+            raise InvalidScan(f"/kspace has no samples: axis {label} has length 0; write at least one")
+
+
+def _check_subset(name: str, array: LabelledArray, accepted: Mapping[str, int]) -> None:
+    for label, size in array.sizes.items():
+        if label not in accepted:
+            raise InvalidScan(
+                f"{name} has the axis {label}; accepted is any subset of the k-space axes without coil: "
+                f"{', '.join(accepted)}"
+            )
+        if size != accepted[label]:
+            raise InvalidScan(
+                f"{name} has length {size} along {label}, /kspace has {accepted[label]}: write one entry for each "
+                f"position"
+            )
+
+
+def _check_noise(array: LabelledArray, coils: int) -> None:
+    if set(array.axes) != {"coil", "sample"}:
+        raise InvalidScan(f"/noise has the axes {', '.join(array.axes)}; accepted are exactly coil and sample")
+    sizes = array.sizes
+    if sizes["coil"] != coils:
+        raise InvalidScan(
+            f"/noise has {sizes['coil']} coils, /kspace has {coils}: write the noise of the same coils in the same order"
+        )
+    if sizes["sample"] <= coils:
+        raise InvalidScan(
+            f"/noise has {sizes['sample']} samples for {coils} coils; more samples than coils are needed to estimate "
+            f"the noise covariance: write a longer noise readout or leave /noise out"
+        )
+
+
+def _check_calibration(name: str, array: LabelledArray, fixed: Mapping[str, int], plane: tuple[str, ...]) -> None:
+    accepted = [*fixed, *plane]
+    axes = array.axes
+    optional = {"slice"} | ({"coil"} if fixed.get("coil", 1) == 1 else set())
+    unknown = [axis for axis in axes if axis not in accepted]
+    absent = [axis for axis in accepted if axis not in axes and axis not in optional]
+    if unknown or absent:
+        raise InvalidScan(f"{name} has the axes {', '.join(axes)}; accepted are {', '.join(accepted)}")
+    for label, size in array.sizes.items():
+        if label in fixed and size != fixed[label]:
+            raise InvalidScan(f"{name} has length {size} along {label}, /kspace has {fixed[label]}: write the same number")
+        if size == 0:
+            raise InvalidScan(f"{name} has length 0 along {label}; write at least one sample or leave {name} out")
+
+
+def _check_map_size(scan: Scan, array: LabelledArray, image: tuple[str, ...]) -> None:
+    received = tuple(array.sizes[axis] for axis in image)
+    cropped = scan.plane_shape[0], cropped_readout(scan)
+    if received not in (scan.plane_shape, cropped):
+        raise InvalidScan(
+            f"/sensitivity has the matrix {received}; accepted is that of k-space, {scan.plane_shape}"
+            + (f", or {cropped} with readout oversampling removed" if cropped != scan.plane_shape else "")
+        )
+
+
+def cropped_readout(scan: Scan) -> int:
+    """Columns of a plane once readout oversampling is removed (unchanged for phase-phase planes).
+
+    Raises
+    ------
+    InvalidScan
+        When the oversampling does not leave a whole number of columns.
+    """
+    columns = scan.plane_shape[1]
+    oversampling = float(scan.attributes.get("readout_oversampling", 1.0))
+    if scan.plane_axes[1] != "kx" or oversampling == 1.0:
+        return columns
+    exact = columns / oversampling
+    if abs(exact - round(exact)) > 1e-6 or round(exact) < 1:
+        raise InvalidScan(
+            f"readout_oversampling {oversampling:g} does not divide the {columns} readout samples into a whole number; "
+            f"correct the attribute"
+        )
+    return round(exact)
