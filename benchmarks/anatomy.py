@@ -176,7 +176,7 @@ def loop_fields(shape: tuple[int, int], coils: int, rng: np.random.Generator) ->
     """Return receive fields ``Bx - i By`` of circular loops around the object (Biot-Savart law).
 
     ``B(r) = sum over segments of dl x (r - l) / |r - l|^3``, in the plane through the loops' centres. Loops
-    face the middle from 1.25 to 1.45 halves of the field of view away; places and gains come from `rng`.
+    face the middle from 1.45 to 1.65 halves of the field of view away; places and gains come from `rng`.
 
     Returns
     -------
@@ -187,7 +187,7 @@ def loop_fields(shape: tuple[int, int], coils: int, rng: np.random.Generator) ->
     fields = np.zeros((coils, *shape), dtype=np.complex128)
     for c in range(coils):
         angle = 2 * np.pi * (c + rng.uniform(-0.15, 0.15)) / coils
-        distance, radius = rng.uniform(1.25, 1.45), rng.uniform(0.5, 0.65)
+        distance, radius = rng.uniform(1.45, 1.65), rng.uniform(0.65, 0.8)
         gain = rng.uniform(0.8, 1.2) * np.exp(2j * np.pi * rng.uniform())
         outward = np.array([math.cos(angle), math.sin(angle)])
         along = np.array([-math.sin(angle), math.cos(angle)])
