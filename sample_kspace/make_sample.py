@@ -3,8 +3,8 @@
 With the project installed, `python sample_kspace/make_sample.py [FOLDER]` writes `cut_fruit_full.h5` and
 `cut_fruit_undersampled.h5` into the folder (this one by default).
 
-The scene is invented: a food-science lab images fruit for defects that the peel hides. Every part of the fruit
-is an ellipse, coil maps and phase are short Fourier series, so k-space is exact, not sampled.
+The scene is invented: a food-science lab images fruit for defects that the peel hides. Every part of it is
+an ellipse, coil maps and phase are short Fourier series, so k-space is exact, not sampled.
 """
 
 from __future__ import annotations
