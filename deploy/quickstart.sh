@@ -23,7 +23,7 @@ esac
 source deploy/python.sh
 SECONDS=0
 folder="$PWD/quickstart-files"
-scan=sample_kspace/fruit_undersampled.h5
+scan=sample_kspace/cut_fruit_undersampled.h5
 data="$folder/data"
 results="$folder/results"
 log="$folder/service.log"

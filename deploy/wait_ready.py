@@ -1,4 +1,4 @@
-"""Wait until the service at an address is ready: `wait_ready.py URL PID`. Fails when its process ends, or after a minute."""
+"""Wait until the service at an address is ready: `wait_ready.py URL PID`. Fails when it ends, or after a minute."""
 
 import os
 import sys

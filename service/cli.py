@@ -1,6 +1,6 @@
 """The command `fallow`: finds the command named, runs it, turns whatever goes wrong into one line and an exit code.
 
-Nothing heavy is imported here or while the arguments are read, so that commands which only talk to a service start fast.
+Nothing heavy is imported here or while the arguments are read: commands that only talk to a service start fast.
 """
 
 from __future__ import annotations
@@ -29,10 +29,13 @@ def build_parser() -> argparse.ArgumentParser:
     parser = _Parser(
         prog="fallow",
         description="Turns undersampled multi-coil Cartesian MRI k-space into images. Not for diagnosis.",
-        epilog="Exit codes: 0 done, 1 internal error, 2 input refused, 3 job failed or dismissed, 4 service unreachable.",
+        epilog="Exit codes: 0 done, 1 internal error, 2 input refused, 3 job failed or dismissed, "
+        "4 service unreachable.",
     )
     parser.add_argument("--version", action="version", version=f"fallow {metadata.version('fallow')}")
-    parser.add_argument("--traceback", action="store_true", help="show where an error came from, for a bug report")
+    parser.add_argument(
+        "--traceback", action="store_true", help="show where an error came from, for a bug report"
+    )
     commands = parser.add_subparsers(dest="command", metavar="COMMAND", required=True, parser_class=_Parser)
     for group in _GROUPS:
         group.add_commands(commands)
@@ -56,7 +59,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
     try:
         code: int = parsed.run(parsed)
         sys.stdout.flush()
-    except (Exception, KeyboardInterrupt) as error:  # noqa: BLE001 - the one place where every error becomes a line
+    except (Exception, KeyboardInterrupt) as error:
         if parsed.traceback:
             raise
         line, code = explain(error)

@@ -71,7 +71,9 @@ def picture_png(
     """
     stack = np.asarray(magnitude, dtype=np.float32)
     if stack.ndim not in {2, 3} or stack.size == 0:
-        raise ValueError(f"a picture needs (rows, columns) or (planes, rows, columns), received the shape {stack.shape}")
+        raise ValueError(
+            f"a picture needs (rows, columns) or (planes, rows, columns), received the shape {stack.shape}"
+        )
     is_single = stack.ndim == 2
     stack = stack[np.newaxis] if is_single else stack
     chosen = evenly_chosen(len(stack), MOSAIC_PLANES)
@@ -101,7 +103,8 @@ def result_png(path: Path | str, *, title: str) -> bytes:
         chosen = [every[position] for position in evenly_chosen(len(every), MOSAIC_PLANES)]
         stack = np.stack([np.abs(image[index]) for index in chosen])
         labels = [
-            "  ".join(f"{axis} {i}" for axis, i, n in zip(axes, index, outer, strict=False) if n > 1) for index in chosen
+            "  ".join(f"{axis} {i}" for axis, i, n in zip(axes, index, outer, strict=False) if n > 1)
+            for index in chosen
         ]
     return picture_png(stack, title=title, pixel_size_mm=pixel_size, labels=labels)
 
@@ -112,7 +115,9 @@ def quick_look(scan: Scan) -> bytes:
     index = planes[len(planes) // 2]
     samples = scan.kspace(index)
     sampled = np.where(scan.mask(index, samples), samples, 0)
-    image = np.fft.fftshift(np.fft.ifft2(np.fft.ifftshift(sampled, axes=(-2, -1)), norm="ortho"), axes=(-2, -1))
+    image = np.fft.fftshift(
+        np.fft.ifft2(np.fft.ifftshift(sampled, axes=(-2, -1)), norm="ortho"), axes=(-2, -1)
+    )
     magnitude = np.sqrt(np.sum(np.abs(image.astype(np.complex64)) ** 2, axis=0))
     fields = scan.attributes.get("field_of_view_mm")
     axes = [axis.removeprefix("k") for axis in scan.plane_axes]
@@ -130,7 +135,9 @@ def evenly_chosen(count: int, most: int) -> list[int]:
     return [round(position * (count - 1) / (most - 1)) for position in range(most)]
 
 
-def _pixel_size(axes: Sequence[str], shape: Sequence[int], fields: Sequence[float]) -> tuple[float, float] | None:
+def _pixel_size(
+    axes: Sequence[str], shape: Sequence[int], fields: Sequence[float]
+) -> tuple[float, float] | None:
     by_axis = dict(zip("xyz", (float(field) for field in fields), strict=True))
     height, width = (by_axis[axis] / length for axis, length in zip(axes, shape, strict=True))
     return (height, width) if min(height, width) > 0 else None
@@ -141,7 +148,9 @@ def _white(stack: Magnitude) -> float:
     return white if white > 0 else float(stack.max()) or 1.0
 
 
-def _tile_size(shape: Sequence[int], pixel_size_mm: tuple[float, float] | None, across: int) -> tuple[int, int]:
+def _tile_size(
+    shape: Sequence[int], pixel_size_mm: tuple[float, float] | None, across: int
+) -> tuple[int, int]:
     """Height and width on screen: true aspect ratio, no plane smaller than it needs to be, no picture too large."""
     height, width = pixel_size_mm or (1.0, 1.0)
     smaller = min(height, width)
@@ -157,7 +166,9 @@ def _tile(plane: Magnitude, white: float, size: tuple[int, int]) -> Image.Image:
     tile = Image.fromarray(grey)
     height, width = size
     is_whole_factor = height % grey.shape[0] == 0 and width % grey.shape[1] == 0
-    return tile.resize((width, height), Image.Resampling.NEAREST if is_whole_factor else Image.Resampling.BICUBIC)
+    return tile.resize(
+        (width, height), Image.Resampling.NEAREST if is_whole_factor else Image.Resampling.BICUBIC
+    )
 
 
 def _mosaic(tiles: Sequence[Image.Image], labels: Sequence[str], across: int) -> Image.Image:

@@ -132,8 +132,15 @@ def client_url() -> str:
     return os.environ.get("FALLOW_URL") or f"http://{DEFAULT_HOST}:{DEFAULT_PORT}"
 
 
-def client_token(data: str | os.PathLike[str] | None = None) -> str | None:
+def client_token(data: str | os.PathLike[str] | None = None, *, is_local: bool = True) -> str | None:
     """Token that the client and the commands send: `FALLOW_TOKEN`, else the owner's in the local data folder.
+
+    Parameters
+    ----------
+    data : path, optional
+        Data folder.
+    is_local : bool
+        Whether the token goes to this machine; the owner's token is never sent to another one.
 
     Returns
     -------
@@ -141,8 +148,8 @@ def client_token(data: str | os.PathLike[str] | None = None) -> str | None:
         None where there is neither.
     """
     token = os.environ.get("FALLOW_TOKEN", "").strip()
-    if token:
-        return token
+    if token or not is_local:
+        return token or None
     try:
         return (data_folder(data) / "token").read_text(encoding="ascii").strip() or None
     except (OSError, UnicodeDecodeError):

@@ -1,7 +1,7 @@
 """Python client of the Fallow service, for acquisition and analysis scripts.
 
-Importing it loads httpx and the standard library alone: NumPy and h5py come in when arrays are handed over or asked for,
-and nothing of `recon` ever does (a user's own script is likely called ``recon.py``).
+Importing it loads httpx and the standard library alone: NumPy and h5py come in when arrays are handed over or asked
+for, and nothing of `recon` ever does (a user's own script is likely called ``recon.py``).
 
 Examples
 --------

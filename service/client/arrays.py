@@ -49,9 +49,13 @@ def write_arrays(path: Path, arrays: Mapping[str, Any]) -> None:
 
     unknown = sorted(set(arrays) - set(_ACCEPTED))
     if unknown:
-        raise InputRefused(f"Unknown entry {unknown[0]!r} among the arrays: accepted are {', '.join(_ACCEPTED)}.")
+        raise InputRefused(
+            f"Unknown entry {unknown[0]!r} among the arrays: accepted are {', '.join(_ACCEPTED)}."
+        )
     if arrays.get("kspace") is None:
-        raise InputRefused("The arrays hold no `kspace`: give the measured samples under that name, with their `axes`.")
+        raise InputRefused(
+            "The arrays hold no `kspace`: give the measured samples under that name, with their `axes`."
+        )
 
     with h5py.File(path, "w") as file:
         file.attrs["layout"] = "fallow-scan"
@@ -75,7 +79,9 @@ def write_arrays(path: Path, arrays: Mapping[str, Any]) -> None:
         for mapping_name, dataset_name in _ATTRIBUTE_MAPPINGS.items():
             attributes = arrays.get(mapping_name) or {}
             if attributes and dataset_name not in file:
-                raise InputRefused(f"`{mapping_name}` is given without `{dataset_name}`: give both or neither.")
+                raise InputRefused(
+                    f"`{mapping_name}` is given without `{dataset_name}`: give both or neither."
+                )
             for name, value in attributes.items():
                 file[dataset_name].attrs[name] = value
 

@@ -16,7 +16,7 @@ import httpx
 from service.client.arrays import write_arrays
 from service.client.errors import InputRefused
 from service.client.jobs import Job
-from service.client.transport import Transport, digest_header, file_body
+from service.client.transport import Transport, digest_header, file_body, is_loopback
 from service.settings import client_token, client_url
 
 
@@ -28,7 +28,8 @@ class Client:
     url : str, optional
         Address; by default that of ``FALLOW_URL``, else the service on this machine.
     token : str, optional
-        By default that of ``FALLOW_TOKEN``, else the owner's token in the local data folder.
+        By default that of ``FALLOW_TOKEN``, else, for a service on this machine, the owner's token in the local data
+        folder.
     patience : float
         Seconds during which dropped connections are tried again.
 
@@ -41,8 +42,11 @@ class Client:
     def __init__(self, url: str | None = None, token: str | None = None, *, patience: float = 3.0) -> None:
         address = url or client_url()
         if not address.startswith(("http://", "https://")):
-            raise InputRefused(f"{address!r} is no address of a service: expected http://HOST:PORT or https://HOST.")
-        self._transport = Transport(address, token or client_token(), patience=patience)
+            raise InputRefused(
+                f"{address!r} is no address of a service: expected http://HOST:PORT or https://HOST."
+            )
+        found = token or client_token(is_local=is_loopback(address))
+        self._transport = Transport(address, found, patience=patience)
 
     @property
     def url(self) -> str:
@@ -94,7 +98,9 @@ class Client:
             The service refuses the scan or the settings; the exception carries the problem details.
         ServiceUnreachable
         """
-        return self.reconstruct(str(self.upload(scan, label=label)["id"]), settings, label=label, priority=priority)
+        return self.reconstruct(
+            str(self.upload(scan, label=label)["id"]), settings, label=label, priority=priority
+        )
 
     def upload(
         self, scan: str | os.PathLike[str] | Mapping[str, Any], *, label: str | None = None
@@ -135,7 +141,9 @@ class Client:
 
     def job(self, job_id: str) -> Job:
         """One job by its identifier."""
-        return Job(self._transport, self._transport.request("GET", f"/v1/jobs/{quote(job_id, safe='')}").json())
+        return Job(
+            self._transport, self._transport.request("GET", f"/v1/jobs/{quote(job_id, safe='')}").json()
+        )
 
     def jobs(self, *, label: str | None = None, state: str | None = None) -> Iterator[Job]:
         """Jobs of yours, newest first, optionally those of one label or state."""

@@ -1,4 +1,4 @@
-"""What can go wrong on the client's side, each as one clear sentence and, where the service said it, its problem details."""
+"""What can go wrong on the client's side: one clear sentence each, with problem details where the service said it."""
 
 from __future__ import annotations
 

@@ -99,7 +99,9 @@ class Job:
             while not self.is_finished:
                 left = None if deadline is None else deadline - time.monotonic()
                 if left is not None and left <= 0:
-                    raise WaitTimedOut(f"Job {self.id} is not done after {timeout:g} s ({self.state}): it goes on.")
+                    raise WaitTimedOut(
+                        f"Job {self.id} is not done after {timeout:g} s ({self.state}): it goes on."
+                    )
                 self._poll(_PROGRESS_POLL_SECONDS if line else _LONG_POLL_SECONDS, left)
                 self._show(line)
         finally:

@@ -1,4 +1,4 @@
-"""One HTTP exchange with the service: retries of dropped connections, problem details as exceptions, checked downloads."""
+"""HTTP exchanges with the service: dropped connections tried again, problems as exceptions, checked downloads."""
 
 from __future__ import annotations
 
@@ -8,13 +8,32 @@ import ipaddress
 import time
 from collections.abc import Callable, Iterable, Mapping
 from pathlib import Path
-from typing import Any, BinaryIO
+from typing import Any, Protocol
 
 import httpx
 
-from service.client.errors import DamagedDownload, FallowError, RequestRefused, ServiceFault, ServiceUnreachable
+from service.client.errors import (
+    DamagedDownload,
+    FallowError,
+    RequestRefused,
+    ServiceFault,
+    ServiceUnreachable,
+)
 
 Body = Callable[[], Iterable[bytes]]
+
+
+class RandomAccessFile(Protocol):
+    """A binary file open for writing and reading back."""
+
+    def write(self, data: bytes, /) -> int: ...
+    def readinto(self, buffer: bytearray, /) -> int: ...
+    def readable(self) -> bool: ...
+    def seek(self, position: int, /) -> int: ...
+    def tell(self) -> int: ...
+    def truncate(self) -> int: ...
+    def flush(self) -> None: ...
+
 
 _CHUNK = 1 << 20
 _FIRST_PAUSE = 0.1
@@ -37,7 +56,7 @@ class Transport:
             headers=headers,
             timeout=httpx.Timeout(60.0, connect=5.0),
             # A proxy set for the outside world must not swallow calls to this machine.
-            trust_env=not _is_loopback(httpx.URL(self.url).host),
+            trust_env=not is_loopback(self.url),
         )
 
     def close(self) -> None:
@@ -97,7 +116,9 @@ class Transport:
             time.sleep(pause)
             pause = min(2 * pause, _LONGEST_PAUSE)
 
-    def download(self, path: str, target: BinaryIO, *, headers: Mapping[str, str] | None = None) -> None:
+    def download(
+        self, path: str, target: RandomAccessFile, *, headers: Mapping[str, str] | None = None
+    ) -> None:
         """Write the answer to GET `path` into `target`, going on where a dropped connection broke off.
 
         Raises
@@ -179,7 +200,7 @@ def digest_header(path: Path) -> str:
         return f"sha-256=:{base64.b64encode(hashlib.file_digest(file, 'sha256').digest()).decode()}:"
 
 
-def _check_digest(file: BinaryIO, header: str | None, path: str) -> None:
+def _check_digest(file: RandomAccessFile, header: str | None, path: str) -> None:
     for member in (header or "").split(","):
         algorithm, _, value = member.strip().partition("=")
         if algorithm != "sha-256":
@@ -198,7 +219,9 @@ def _retry_after(response: httpx.Response) -> float:
         return 0.0
 
 
-def _is_loopback(host: str) -> bool:
+def is_loopback(url: str) -> bool:
+    """Whether an address is one of this machine."""
+    host = httpx.URL(url).host
     try:
         return ipaddress.ip_address(host.strip("[]")).is_loopback
     except ValueError:

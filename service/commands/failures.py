@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import errno
 import os
 import sys
 from enum import IntEnum
@@ -25,6 +26,7 @@ class Refused(Exception):
 def explain(error: BaseException) -> tuple[str, ExitCode]:
     """The line to print and the exit code; an empty line where nothing is left to say."""
     from recon.errors import ReconError
+    from service.settings import SettingError
 
     if isinstance(error, KeyboardInterrupt):
         return "interrupted.", ExitCode.INTERRUPTED
@@ -32,21 +34,29 @@ def explain(error: BaseException) -> tuple[str, ExitCode]:
         # Whoever read the output has gone; keep the interpreter from failing once more when it flushes.
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
         return "", ExitCode.INTERNAL_ERROR
-    if isinstance(error, Refused | ReconError):
+    if isinstance(error, Refused | ReconError | SettingError):
         return _line(error), ExitCode.REFUSED
     if type(error).__module__.startswith("service.client"):
         return _explain_client(error)
     if isinstance(error, OSError):
         return _explain_os(error)
     if isinstance(error, MemoryError):
-        return "not enough memory for this scan: close other programs, or use a machine with more.", ExitCode(1)
+        return "not enough memory for this scan: close other programs, or use a machine with more.", ExitCode(
+            1
+        )
     kind = type(error).__name__
     line = f"internal error ({kind}: {_line(error)}): run `fallow --traceback ...` for a bug report."
     return line, ExitCode.INTERNAL_ERROR
 
 
 def _explain_client(error: BaseException) -> tuple[str, ExitCode]:
-    from service.client.errors import InputRefused, JobFailed, RequestRefused, ServiceFault, ServiceUnreachable
+    from service.client.errors import (
+        InputRefused,
+        JobFailed,
+        RequestRefused,
+        ServiceFault,
+        ServiceUnreachable,
+    )
 
     line = _line(error)
     if isinstance(error, ServiceUnreachable):
@@ -56,17 +66,26 @@ def _explain_client(error: BaseException) -> tuple[str, ExitCode]:
     if isinstance(error, RequestRefused) and error.status == 401:
         remedy = "give a token with --token or FALLOW_TOKEN, or use the account that started the service."
         return f"{line.rstrip('.')}: {remedy}", ExitCode.REFUSED
-    if isinstance(error, InputRefused) or (isinstance(error, RequestRefused) and not isinstance(error, ServiceFault)):
+    if isinstance(error, InputRefused) or (
+        isinstance(error, RequestRefused) and not isinstance(error, ServiceFault)
+    ):
         return line, ExitCode.REFUSED
     return line, ExitCode.INTERNAL_ERROR
 
 
 def _explain_os(error: OSError) -> tuple[str, ExitCode]:
+    if error.errno == errno.EADDRINUSE:
+        return "the port is taken by another program: choose another with --port.", ExitCode.REFUSED
     where = f" {error.filename}" if error.filename else ""
     reason = error.strerror or str(error)
-    if isinstance(error, FileNotFoundError | PermissionError | IsADirectoryError | NotADirectoryError | FileExistsError):
+    if isinstance(
+        error, FileNotFoundError | PermissionError | IsADirectoryError | NotADirectoryError | FileExistsError
+    ):
         return f"cannot use{where}: {reason.lower()}; check the path and its permissions.", ExitCode.REFUSED
-    return f"{reason}{':' if where else ''}{where}; see that disk and folder are in order.", ExitCode.INTERNAL_ERROR
+    return (
+        f"{reason}{':' if where else ''}{where}; see that disk and folder are in order.",
+        ExitCode.INTERNAL_ERROR,
+    )
 
 
 def _line(error: BaseException) -> str:

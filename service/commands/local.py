@@ -19,10 +19,18 @@ def add_commands(commands: _Commands) -> None:
     """Add both to the parser."""
     reconstruct = commands.add_parser("reconstruct", help="turn a scan file into an image, without a service")
     reconstruct.add_argument("scan", type=Path, metavar="SCAN", help="scan file (HDF5)")
-    reconstruct.add_argument("-o", "--output", type=Path, required=True, metavar="IMAGE.h5", help="result file")
-    reconstruct.add_argument("--settings", type=Path, metavar="FILE.json", help="settings that differ from the defaults")
-    reconstruct.add_argument("--report", type=Path, metavar="FILE.json", help="write the consistency report there too")
-    reconstruct.add_argument("--picture", type=Path, metavar="FILE.png", help="write a picture of the image there too")
+    reconstruct.add_argument(
+        "-o", "--output", type=Path, required=True, metavar="IMAGE.h5", help="result file"
+    )
+    reconstruct.add_argument(
+        "--settings", type=Path, metavar="FILE.json", help="settings that differ from the defaults"
+    )
+    reconstruct.add_argument(
+        "--report", type=Path, metavar="FILE.json", help="write the consistency report there too"
+    )
+    reconstruct.add_argument(
+        "--picture", type=Path, metavar="FILE.png", help="write a picture of the image there too"
+    )
     reconstruct.set_defaults(run=run_reconstruct)
     inspect = commands.add_parser("inspect", help="show what a scan file holds and what is wrong with it")
     inspect.add_argument("scan", type=Path, metavar="SCAN", help="scan file (HDF5)")
@@ -47,7 +55,7 @@ def run_reconstruct(arguments: argparse.Namespace) -> int:
     if arguments.json:
         print_json({"files": {name: str(path) for name, path in written.items() if path}, "report": report})
         return ExitCode.DONE
-    print_facts({**{name: path for name, path in written.items()}, **summary(report)})
+    print_facts({**written, **summary(report)})
     print_findings(report["findings"])
     print_caution(report["caution"])
     return ExitCode.DONE
@@ -55,9 +63,10 @@ def run_reconstruct(arguments: argparse.Namespace) -> int:
 
 def run_inspect(arguments: argparse.Namespace) -> int:
     """Look through all the data of a scan and say what was found."""
+    from recon.inspection import inspect
+
     from recon.caution import CAUTION
     from recon.formats import open_scan
-    from recon.inspection import inspect
     from service.progress import ProgressLine
 
     _check_scan(arguments.scan)

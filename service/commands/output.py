@@ -65,7 +65,9 @@ def read_settings(path: Path | None) -> dict[str, Any]:
     except OSError as error:
         raise Refused(f"cannot read the settings file {path} ({error.strerror}): check the path.") from error
     except (ValueError, RecursionError) as error:
-        raise Refused(f"the settings file {path} is not JSON ({error}): write one object like {_EXAMPLE}.") from error
+        raise Refused(
+            f"the settings file {path} is not JSON ({error}): write one object like {_EXAMPLE}."
+        ) from error
     if not isinstance(settings, dict):
         kind = type(settings).__name__
         raise Refused(f"the settings file {path} holds a JSON {kind}: write one object like {_EXAMPLE}.")

@@ -15,6 +15,7 @@ from types import FrameType
 from typing import Any
 
 from recon.pipeline import reconstruct_file
+
 from recon.settings import parse_settings
 from service.pictures import result_png
 from service.progress import ProgressLine
@@ -54,7 +55,7 @@ def reconstruct_to_files(
             if path is not None
         }
         with ProgressLine() as line:
-            found = reconstruct_file(
+            found: dict[str, Any] = reconstruct_file(
                 scan, scratch[image], checked, progress=line.update, provenance=collect(sha256, checked)
             )
         if report is not None:

@@ -23,24 +23,36 @@ def add_commands(commands: _Commands) -> None:
     """Add all of them to the parser."""
     submit = commands.add_parser("submit", help="send a scan to the service and ask for its image")
     submit.add_argument("scan", type=Path, metavar="SCAN", help="scan file (HDF5)")
-    submit.add_argument("--settings", type=Path, metavar="FILE.json", help="settings that differ from the defaults")
+    submit.add_argument(
+        "--settings", type=Path, metavar="FILE.json", help="settings that differ from the defaults"
+    )
     submit.add_argument("--label", help="a name of your own for scan and job")
-    submit.add_argument("--priority", choices=("routine", "urgent"), default="routine", help="default: %(default)s")
+    submit.add_argument(
+        "--priority", choices=("routine", "urgent"), default="routine", help="default: %(default)s"
+    )
     submit.add_argument("--wait", action="store_true", help="wait until the job is done")
     jobs = commands.add_parser("jobs", help="list your jobs, newest first")
     jobs.add_argument("--label", help="those of one label only")
     jobs.add_argument("--state", choices=_STATES, help="those in one state only")
-    jobs.add_argument("--limit", type=_limit, default=50, metavar="N", help="that many at most (default: %(default)s)")
+    jobs.add_argument(
+        "--limit", type=_limit, default=50, metavar="N", help="that many at most (default: %(default)s)"
+    )
     job = commands.add_parser("job", help="show one job")
-    collect = commands.add_parser("collect", help="fetch image.h5, report.json and image.png of a finished job")
-    collect.add_argument("-o", "--output", type=Path, required=True, metavar="DIR", help="folder for the three files")
+    collect = commands.add_parser(
+        "collect", help="fetch image.h5, report.json and image.png of a finished job"
+    )
+    collect.add_argument(
+        "-o", "--output", type=Path, required=True, metavar="DIR", help="folder for the three files"
+    )
     dismiss = commands.add_parser("dismiss", help="end a waiting or running job")
     for command in (job, collect, dismiss):
         command.add_argument("id", metavar="ID", help="identifier of the job")
     runs = {submit: run_submit, jobs: run_jobs, job: run_job, collect: run_collect, dismiss: run_dismiss}
     for command, run in runs.items():
         command.add_argument("--url", help="address of the service (default: FALLOW_URL, or this machine)")
-        command.add_argument("--token", help="access token (default: FALLOW_TOKEN, or the local data folder's)")
+        command.add_argument(
+            "--token", help="access token (default: FALLOW_TOKEN, or the local data folder's)"
+        )
         command.add_argument("--json", action="store_true", help="print JSON for scripts")
         command.set_defaults(run=run)
 
@@ -77,7 +89,13 @@ def run_jobs(arguments: argparse.Namespace) -> int:
     print_table(
         ("id", "state", "done", "label", "created"),
         (
-            (job.id, job.state, f"{100 * job.progress:.0f} %", job.facts.get("label") or "", str(job.facts["created_at"]))
+            (
+                job.id,
+                job.state,
+                f"{100 * job.progress:.0f} %",
+                job.facts.get("label") or "",
+                str(job.facts["created_at"]),
+            )
             for job in jobs
         ),
     )

@@ -19,14 +19,19 @@ def add_commands(commands: _Commands) -> None:
     """Add both to the parser."""
     serve = commands.add_parser("serve", help="start the service and one local worker")
     serve.add_argument("--host", default=DEFAULT_HOST, help="address to listen on (default: %(default)s)")
-    serve.add_argument("--port", type=_port, default=DEFAULT_PORT, help="port to listen on (default: %(default)s)")
+    serve.add_argument(
+        "--port", type=_port, default=DEFAULT_PORT, help="port to listen on (default: %(default)s)"
+    )
     serve.add_argument(
         "--workers", type=_count, default=1, metavar="N", help="local worker processes (default: %(default)s)"
     )
     worker = commands.add_parser("worker", help="start one more worker on a data folder")
     for command in (serve, worker):
         command.add_argument(
-            "--data", type=Path, metavar="FOLDER", help="data folder (default: FALLOW_DATA, or the user's data directory)"
+            "--data",
+            type=Path,
+            metavar="FOLDER",
+            help="data folder (default: FALLOW_DATA, or the user's data directory)",
         )
     serve.set_defaults(run=run_serve)
     worker.set_defaults(run=run_worker)
@@ -62,7 +67,9 @@ def _check_server_packages() -> None:
 
     missing = [name for name in _SERVER_PACKAGES if find_spec(name) is None]
     if missing:
-        raise Refused(f"the service needs {', '.join(missing)}: install it with `pip install 'fallow[server]'`.")
+        raise Refused(
+            f"the service needs {', '.join(missing)}: install it with `pip install 'fallow[server]'`."
+        )
 
 
 def _port(text: str) -> int:
