@@ -1,0 +1,1 @@
+"""Everything about receive coils: noise, compression, calibration (maps), combination."""

@@ -1,0 +1,168 @@
+"""Noise covariance of the receive channels and the whitening that makes it the identity.
+
+After whitening the noise of every channel is independent with E|n|^2 = 1 for each complex sample, so that strengths,
+residuals and intensities no longer depend on the receiver (Pruessmann 2001; Kellman & McVeigh 2005).
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any, Final
+
+import numpy as np
+from numpy.typing import NDArray
+
+from recon.errors import InvalidScan
+from recon.scan import Scan
+
+#: eigenvalues of the covariance below this fraction of the largest are raised to it, so that a channel without any
+#: noise (a dead coil) does not get infinite weight.
+SMALLEST_EIGENVALUE: Final = 1e-8
+#: planes looked at when the noise has to be estimated from the k-space periphery.
+PERIPHERY_PLANES: Final = 8
+#: share of the sampled positions, those farthest from the centre, taken as periphery.
+PERIPHERY_SHARE: Final = 0.05
+#: an estimate this far below the largest sample is rounding, not noise: the scan counts as free of noise.
+ROUNDING: Final = 1e-6
+
+
+@dataclass(frozen=True)
+class Whitening:
+    """The whitener and where it came from.
+
+    Attributes
+    ----------
+    whitener : complex128 (coil, coil)
+        Psi^(-1/2): whitened channels = whitener @ channels. The identity, up to one scalar, where there is no noise.
+    unwhitener : complex128 (coil, coil)
+        Its inverse.
+    covariance : complex128 (coil, coil)
+        Psi at the image's dwell time, in the square of the data's units.
+    source : {"noise-scan", "periphery", "none"}
+        `none`: the scan is free of noise, strengths are fractions of the largest zero-filled image value.
+    samples : int
+        Complex samples for each coil behind the estimate.
+    """
+
+    whitener: NDArray[Any]
+    unwhitener: NDArray[Any]
+    covariance: NDArray[Any]
+    source: str
+    samples: int
+
+    @property
+    def has_noise_units(self) -> bool:
+        """Whether whitened data are in units of the noise."""
+        return self.source != "none"
+
+    def apply(self, channels: NDArray[Any]) -> NDArray[Any]:
+        """Whiten an array whose first axis is `coil`; complex64 in and out."""
+        return mix(self.whitener, channels)
+
+
+def mix(matrix: NDArray[Any], channels: NDArray[Any]) -> NDArray[Any]:
+    """Apply a matrix (out, coil) along the first axis of `channels`, keeping its precision."""
+    flat = channels.reshape(channels.shape[0], -1)
+    return (matrix.astype(channels.dtype) @ flat).reshape(matrix.shape[0], *channels.shape[1:])
+
+
+def sample_covariance(samples: NDArray[Any]) -> NDArray[Any]:
+    """Psi = n n^H / samples for complex n of shape (coil, sample), zero mean assumed; complex128."""
+    values = samples.astype(np.complex128)
+    return np.asarray(values @ values.conj().T / values.shape[1])
+
+
+def dwell_scale(
+    noise_time_us: float | None, image_time_us: float | None, receiver_noise_bandwidth: float | None
+) -> float:
+    """Factor from the noise scan's covariance to the image's.
+
+    Psi_image = Psi_noise * (noise dwell / image dwell) / receiver_noise_bandwidth (Kellman & McVeigh 2005): a longer
+    dwell lets in less noise, and the receiver's filter has lowered the mean noise power that was measured.
+    """
+    scale = 1.0 if noise_time_us is None or image_time_us is None else noise_time_us / image_time_us
+    return scale if receiver_noise_bandwidth is None else scale / receiver_noise_bandwidth
+
+
+def whitening_from(covariance: NDArray[Any], source: str, samples: int) -> Whitening:
+    """Hermitian square roots of a covariance.
+
+    Raises
+    ------
+    InvalidScan
+        When it is zero or not finite.
+    """
+    values, vectors = np.linalg.eigh((covariance + covariance.conj().T) / 2)
+    largest = float(values[-1])
+    if not np.isfinite(largest) or largest <= 0:
+        raise InvalidScan("/noise holds only zeros; write the noise readouts as measured or leave /noise out")
+    root = np.sqrt(np.maximum(values, SMALLEST_EIGENVALUE * largest))
+    return Whitening(
+        whitener=(vectors / root) @ vectors.conj().T,
+        unwhitener=(vectors * root) @ vectors.conj().T,
+        covariance=covariance,
+        source=source,
+        samples=samples,
+    )
+
+
+def estimate_whitening(scan: Scan) -> Whitening:
+    """Whitening from `/noise`, or from the periphery of k-space where there is none.
+
+    Raises
+    ------
+    InvalidScan
+        When `/noise` holds only zeros, or NaN or Inf.
+    """
+    noise = scan.noise()
+    if noise is not None:
+        if not np.isfinite(noise).all():
+            raise InvalidScan("/noise contains NaN or Inf; write finite numbers or leave /noise out")
+        scale = dwell_scale(
+            scan.noise_attributes.get("sample_time_us"),
+            scan.attributes.get("sample_time_us"),
+            scan.noise_attributes.get("receiver_noise_bandwidth"),
+        )
+        return whitening_from(sample_covariance(noise) * scale, "noise-scan", noise.shape[1])
+    covariance, samples, largest = periphery_covariance(scan)
+    if largest == 0.0 or np.sqrt(np.trace(covariance).real / scan.coils) <= ROUNDING * largest:
+        identity = np.eye(scan.coils, dtype=np.complex128)
+        unit = largest or 1.0
+        return Whitening(identity / unit, identity * unit, identity * 0, "none", 0)
+    return whitening_from(covariance, "periphery", samples)
+
+
+def periphery_covariance(scan: Scan) -> tuple[NDArray[Any], int, float]:
+    """Covariance of the sampled positions farthest from the k-space centre.
+
+    What little signal is left there makes the estimate too large rather than too small.
+
+    Returns
+    -------
+    covariance : complex128 (coil, coil)
+    samples : int
+        Positions used.
+    largest : float
+        Largest magnitude of any sample seen.
+    """
+    rows, columns = scan.plane_shape
+    distance = np.hypot(
+        (np.arange(rows)[:, np.newaxis] - rows // 2) / max(rows / 2, 1),
+        (np.arange(columns) - columns // 2) / max(columns / 2, 1),
+    )
+    planes = scan.planes()
+    chosen = planes[:: max(1, len(planes) // PERIPHERY_PLANES)]
+    total = np.zeros((scan.coils, scan.coils), np.complex128)
+    samples, largest = 0, 0.0
+    for index in chosen:
+        kspace = scan.kspace(index)
+        sampled = scan.mask(index, kspace) & np.any(kspace != 0, axis=0)
+        if not sampled.any():
+            continue
+        largest = max(largest, float(np.abs(kspace[:, sampled]).max()))
+        count = max(int(PERIPHERY_SHARE * sampled.sum()), min(4 * scan.coils, int(sampled.sum())))
+        far = np.sort(distance[sampled])[-count]
+        values = kspace[:, sampled & (distance >= far)]
+        total += sample_covariance(values) * values.shape[1]
+        samples += values.shape[1]
+    return total / max(samples, 1), samples, largest
