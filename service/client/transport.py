@@ -131,7 +131,7 @@ class Transport:
         pause = _FIRST_PAUSE
         etag: str | None = None
         while True:
-            resume = dict(headers or {})
+            resume = {**(headers or {}), "Accept-Encoding": "identity"}
             if target.tell() and etag:
                 resume |= {"Range": f"bytes={target.tell()}-", "If-Range": etag}
             try:
@@ -143,7 +143,7 @@ class Transport:
                         target.seek(0)
                         target.truncate()
                     etag = response.headers.get("ETag")
-                    for chunk in response.iter_bytes(_CHUNK):
+                    for chunk in response.iter_raw():
                         target.write(chunk)
                         deadline = time.monotonic() + self.patience
                     _check_digest(target, response.headers.get("Repr-Digest"), path)
