@@ -1,0 +1,54 @@
+"""The registry of operators: the contract tests run over every row."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+
+import numpy as np
+
+from recon.operators.base import LinearOperator
+from recon.operators.differences import Differences
+from recon.operators.encoding import Encoding
+from recon.operators.fourier import Fourier
+from recon.operators.wavelet import Wavelet
+from tests.recon.helpers import coil_maps, line_mask, radial_mask
+
+
+def _encoding(coils: int, shape: tuple[int, int], kind: str, dtype: type) -> Encoding:
+    if kind == "lines":
+        mask = line_mask(*shape, every=3, calibration=4)
+    else:
+        mask = radial_mask(max(shape), 7)[: shape[0], : shape[1]]
+    return Encoding(coil_maps(coils, shape, dtype), mask)
+
+
+#: name and how to make the operator in a given complex precision.
+REGISTRY: dict[str, Callable[[type], LinearOperator]] = {
+    "fourier even": lambda dtype: Fourier((12, 16)),
+    "fourier odd": lambda dtype: Fourier((11, 15)),
+    "fourier rows only": lambda dtype: Fourier((2, 11, 8), axes=(-2,)),
+    "differences even": lambda dtype: Differences((12, 8)),
+    "differences odd": lambda dtype: Differences((9, 13)),
+    "differences one row": lambda dtype: Differences((1, 13)),
+    "wavelet haar": lambda dtype: Wavelet((16, 24), "haar"),
+    "wavelet db4": lambda dtype: Wavelet((32, 16), "db4"),
+    "wavelet db4 odd": lambda dtype: Wavelet((27, 31), "db4"),
+    "wavelet sym5": lambda dtype: Wavelet((29, 20), "sym5"),
+    "wavelet coif2": lambda dtype: Wavelet((24, 25), "coif2"),
+    "wavelet too small to decompose": lambda dtype: Wavelet((5, 6), "db4"),
+    "encoding lines even": lambda dtype: _encoding(4, (16, 12), "lines", dtype),
+    "encoding lines odd": lambda dtype: _encoding(3, (15, 11), "lines", dtype),
+    "encoding points even": lambda dtype: _encoding(4, (12, 16), "points", dtype),
+    "encoding points odd": lambda dtype: _encoding(2, (13, 9), "points", dtype),
+    "encoding one coil": lambda dtype: _encoding(1, (11, 16), "lines", dtype),
+}
+
+
+def dense(operator: LinearOperator) -> np.ndarray:
+    """Return the operator's matrix, column by column, in double precision."""
+    columns = []
+    for position in range(int(np.prod(operator.domain_shape))):
+        unit = np.zeros(operator.domain_shape, np.complex128)
+        unit.flat[position] = 1
+        columns.append(operator.forward(unit).ravel())
+    return np.stack(columns, axis=1)
