@@ -82,6 +82,7 @@ echo "Done in $SECONDS s."
 
 if [ "$keep" = yes ]; then
     trap - EXIT INT TERM
-    echo "The service goes on at $FALLOW_URL (stop it with \`kill $service\`); to use it from this shell:"
-    echo "  export FALLOW_URL=$FALLOW_URL FALLOW_DATA=$data PATH=$bin:\$PATH"
+    printf 'export FALLOW_URL=%q FALLOW_DATA=%q PATH=%q:"$PATH"\n' "$FALLOW_URL" "$data" "$bin" >"$folder/environment.sh"
+    echo "The service goes on at $FALLOW_URL; stop it with \`kill $service\`."
+    echo "To use it from this shell: source quickstart-files/environment.sh"
 fi

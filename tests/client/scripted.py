@@ -88,7 +88,8 @@ def scripted(*steps: Step | Callable[[Received], Step]) -> Iterator[Scripted]:
             self.end_headers()
             self.wfile.write(step.body if step.cut_after is None else step.body[: step.cut_after])
 
-        do_GET = do_POST = do_DELETE = handle_request
+        # The names that the standard library calls.
+        do_GET = do_POST = do_DELETE = handle_request  # noqa: N815
 
         def log_message(self, format: str, *args: Any) -> None:
             """Say nothing."""

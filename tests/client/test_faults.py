@@ -6,6 +6,7 @@ import base64
 import hashlib
 import socket
 import time
+from collections.abc import Callable
 from pathlib import Path
 
 import pytest
@@ -156,7 +157,7 @@ def test_download_goes_on_where_it_broke_off(tmp_path: Path) -> None:
         assert request.headers["If-Range"] == '"e"'
         return Step(206, content[1000:], headers)
 
-    steps = [
+    steps: list[Step | Callable[[Received], Step]] = [
         answer(DONE),
         answer({"verdict": "consistent"}),
         Step(200, content, headers, cut_after=1000),
