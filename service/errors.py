@@ -108,6 +108,11 @@ class ProblemKind:
 
 
 INTERNAL: Final = ProblemKind(500, "internal", "The service failed")
+COMPUTING_DIED: Final = ProblemKind(500, "computing-died", "The computing process died twice")
+WORKERS_DIED: Final = ProblemKind(500, "workers-died", "The workers carrying out the job died")
+INSUFFICIENT_MEMORY: Final = ProblemKind(
+    500, "insufficient-memory", "The memory of the worker does not suffice"
+)
 UNAVAILABLE: Final = ProblemKind(503, "unavailable", "The service cannot do this at the moment")
 
 #: The one table; the first matching class of an exception's ancestry decides.
@@ -123,7 +128,9 @@ KINDS: Final[Mapping[type[BaseException], ProblemKind]] = {
     RangeNotSatisfiable: ProblemKind(416, "range-not-satisfiable", "The range lies outside the file"),
     Misdirected: ProblemKind(421, "misdirected", "This service does not answer to that host name"),
     Refused: ProblemKind(422, "refused", "The content is refused"),
-    CalibrationMissing: ProblemKind(422, "calibration-missing", "Coil maps cannot be estimated from this scan"),
+    CalibrationMissing: ProblemKind(
+        422, "calibration-missing", "Coil maps cannot be estimated from this scan"
+    ),
     InvalidScan: ProblemKind(422, "invalid-scan", "The scan is refused"),
     InvalidSettings: ProblemKind(422, "invalid-settings", "The settings are refused"),
     ReconError: ProblemKind(422, "not-reconstructable", "The scan cannot be reconstructed so"),
@@ -176,13 +183,17 @@ def problem_of(error: BaseException) -> tuple[dict[str, Any], dict[str, str]]:
         return problem(kind, f"{_shortage(error)}; try again later"), {"Retry-After": "5"}
     correlation = str(uuid.uuid4())
     log.error("unexpected error %s", correlation, exc_info=error)
-    detail = f"an unexpected error, logged as {correlation}: report this identifier to whoever runs the service"
+    detail = (
+        f"an unexpected error, logged as {correlation}: report this identifier to whoever runs the service"
+    )
     return problem(kind, detail, correlation_id=correlation), {}
 
 
 def pointers(error: InvalidSettings, prefix: str = "/settings") -> list[dict[str, str]]:
     """The single mistakes of refused settings, as JSON pointers into the body of a request."""
-    return [{"pointer": prefix + item["pointer"].rstrip("/"), "detail": item["detail"]} for item in error.errors]
+    return [
+        {"pointer": prefix + item["pointer"].rstrip("/"), "detail": item["detail"]} for item in error.errors
+    ]
 
 
 def _shortage(error: BaseException) -> str | None:

@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+import json
 import platform
 import socket
 from collections.abc import Mapping
 from datetime import UTC, datetime
 from importlib.metadata import PackageNotFoundError, version
+from pathlib import Path
 from typing import Any, Final
 
 from pydantic import BaseModel
@@ -47,6 +49,26 @@ def collect(scan_sha256: str, settings: BaseModel | Mapping[str, Any]) -> dict[s
         "host": socket.gethostname(),
         "started_at": datetime.now(UTC).isoformat(timespec="milliseconds"),
     }
+
+
+def add_duration(image: Path, report: dict[str, Any], seconds: float) -> None:
+    """Write how long a reconstruction took into its result file and its report, both not yet in their places.
+
+    Parameters
+    ----------
+    image : Path
+        The result file.
+    report : dict
+        Changed in place.
+    seconds : float
+        From start to written image.
+    """
+    import h5py
+
+    report["provenance"] = {**report["provenance"], "duration_seconds": round(seconds, 3)}
+    with h5py.File(image, "r+") as file:
+        file.attrs["report"] = json.dumps(report, allow_nan=False)
+        file.attrs["provenance"] = json.dumps(report["provenance"], allow_nan=False)
 
 
 def _installed(name: str) -> str | None:

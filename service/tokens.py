@@ -56,8 +56,8 @@ class Tokens:
         if scheme.lower() == "bearer" and hmac.compare_digest(_digest(token.strip()), self._owner_digest):
             return Principal(OWNER)
         raise Unauthorised(
-            "the token is unknown here: send `Authorization: Bearer TOKEN` with the one in the file `token` of the data "
-            "folder",
+            "the token is unknown here: send `Authorization: Bearer TOKEN` with the one in the file `token` of the "
+            "data folder",
             headers={"WWW-Authenticate": f'{_CHALLENGE}, error="invalid_token"'},
         )
 
@@ -77,12 +77,14 @@ def owner_token(path: Path) -> str:
     with os.fdopen(descriptor, encoding="ascii") as file:
         if stat.S_IMODE(os.fstat(file.fileno()).st_mode) & 0o077:
             raise SettingError(
-                f"others may read the token file {path}: remove it, and the next start writes a new token; or, if nobody "
-                "else has read it, run `chmod 600` on it"
+                f"others may read the token file {path}: remove it, and the next start writes a new token; or, if "
+                "nobody else has read it, run `chmod 600` on it"
             )
         token = file.read().strip()
     if not token:
-        raise SettingError(f"the token file {path} is empty: remove it, and the next start writes a new token")
+        raise SettingError(
+            f"the token file {path} is empty: remove it, and the next start writes a new token"
+        )
     return token
 
 

@@ -1,0 +1,128 @@
+"""The side of the queue that puts jobs in, takes them out, and makes sure that none is forgotten."""
+
+from __future__ import annotations
+
+import logging
+import threading
+from typing import Any
+
+from dbos import DBOSClient
+
+from service.errors import INTERNAL, problem
+from service.queue.engine import APPLICATION, APPLICATION_VERSION, QUEUE, WORKFLOW, open_client
+from service.queue.slots import WorkerStore, vacant
+from service.settings import ServiceSettings
+from service.store.attempts import AttemptStore
+from service.store.database import Database, make_engine
+from service.store.files import Files
+from service.store.jobs import JobRecord
+
+log = logging.getLogger("fallow")
+
+_UNDER_WAY = frozenset({"ENQUEUED", "DELAYED", "PENDING"})
+
+
+class JobQueue:
+    """Domain verbs on the queue. Every one may be called again without harm.
+
+    All of them wait for a database: call them from a thread, never from an event loop.
+    """
+
+    def __init__(self, settings: ServiceSettings, database: Database, files: Files) -> None:
+        self._engine = make_engine(settings.queue_url)
+        self._client: DBOSClient = open_client(self._engine)
+        self._attempts = AttemptStore(database)
+        self._workers = WorkerStore(database, settings.dead_seconds)
+        self._locks = files.locks
+        self._sweep_seconds = settings.sweep_seconds
+        self._stop = threading.Event()
+        self._sweeper: threading.Thread | None = None
+
+    def put(self, job: JobRecord) -> None:
+        """Give a job, whose row is written, its place in the queue; the workflow has the identifier of the job."""
+        self._client.enqueue(
+            {
+                "workflow_name": WORKFLOW,
+                "queue_name": QUEUE,
+                "workflow_id": job.id,
+                "app_version": APPLICATION_VERSION,
+                "application_name": APPLICATION,
+                "priority": job.turn,
+            },
+            job.id,
+        )
+        self._attempts.mark_queued(job.id)
+
+    def cancel(self, job_id: str) -> None:
+        """Take a job out; the process computing it, if any, ends within about a second."""
+        self._client.cancel_workflow(job_id)
+
+    def forget(self, job_id: str) -> None:
+        """Remove the engine's memory of a finished job."""
+        self._client.delete_workflow(job_id)
+
+    def is_reachable(self) -> bool:
+        """Whether the engine's database answers."""
+        self._client.check_connection()
+        return True
+
+    def start_sweeping(self) -> None:
+        """Look for forgotten jobs at intervals, from a thread of its own, until `close`."""
+        self._sweeper = threading.Thread(target=self._sweep_repeatedly, name="fallow-sweep", daemon=True)
+        self._sweeper.start()
+
+    def close(self) -> None:
+        """Stop sweeping and close the engine's database."""
+        self._stop.set()
+        if self._sweeper is not None:
+            self._sweeper.join()
+        self._client.destroy()
+        self._engine.dispose()
+
+    def sweep(self) -> None:
+        """Put in every job without a place, and free those whose worker is dead."""
+        for job in self._attempts.unqueued():
+            self.put(job)
+        queued = {job.id: job for job in self._attempts.queued()}
+        if not queued:
+            return
+        known = {status.workflow_id: status for status in self._statuses(list(queued))}
+        silent = self._workers.silent()
+        for job in queued.values():
+            status = known.get(job.id)
+            if status is None:
+                log.warning("job %s has lost its place in the queue and gets a new one", job.id)
+                self._attempts.mark_unqueued(job.id)
+            elif status.status == "PENDING":
+                self._free(job.id, status.executor_id or "", silent)
+            elif status.status not in _UNDER_WAY:
+                self._end(job.id)
+
+    def _statuses(self, job_ids: list[str]) -> list[Any]:
+        found: list[Any] = []
+        for start in range(0, len(job_ids), 500):
+            found += self._client.list_workflows(
+                workflow_ids=job_ids[start : start + 500], load_input=False, load_output=False
+            )
+        return found
+
+    def _free(self, job_id: str, executor: str, silent: set[str]) -> None:
+        with vacant(self._locks, executor) as is_gone:
+            if is_gone or executor in silent:
+                log.warning("worker %s is dead: job %s goes back to the queue", executor, job_id)
+                self._client.resume_workflow(job_id, queue_name=QUEUE)
+
+    def _end(self, job_id: str) -> None:
+        """End a row whose workflow has ended without ending it, which only a fault of ours can do."""
+        # The row was read before the workflow: it may have ended in the meantime, and then nothing is written.
+        detail = "the worker failed while it carried the job out: order the job again, and report it if that recurs"
+        self._attempts.fail_unfinished(
+            job_id, problem(INTERNAL, detail, stage=None, remedy="order the job again")
+        )
+
+    def _sweep_repeatedly(self) -> None:
+        while not self._stop.wait(self._sweep_seconds):
+            try:
+                self.sweep()
+            except Exception:
+                log.exception("the sweep of the queue failed and is tried again")

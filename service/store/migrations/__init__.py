@@ -1,0 +1,1 @@
+"""Migrations of the metadata, run by `service.store.database`."""
