@@ -9,6 +9,7 @@ import subprocess
 import sys
 import time
 import zipfile
+from collections.abc import Mapping
 from pathlib import Path
 
 import h5py
@@ -31,12 +32,14 @@ def clean(**variables: str) -> dict[str, str]:
     return {**kept, **variables}
 
 
-def run(*command: str | Path, cwd: Path, code: int = 0, **variables: str) -> subprocess.CompletedProcess[str]:
+def run(
+    *command: str | Path, cwd: Path, code: int = 0, variables: Mapping[str, str] | None = None
+) -> subprocess.CompletedProcess[str]:
     """Run a command elsewhere; its exit code must be the one expected."""
     result = subprocess.run(
         [str(part) for part in command],
         cwd=cwd,
-        env=clean(**variables),
+        env=clean(**(variables or {})),
         capture_output=True,
         text=True,
         timeout=400,
@@ -127,10 +130,10 @@ def test_server_install_serves(server: Path, tmp_path: Path) -> None:
         service = subprocess.Popen(command, cwd=tmp_path, env=clean(**address), stdout=log, stderr=log)
     try:
         waited_for(f"{address['FALLOW_URL']}/health/ready", service, tmp_path / "log")
-        done = run(server / "fallow", "submit", SCAN, "--wait", "--json", cwd=tmp_path, **address)
+        done = run(server / "fallow", "submit", SCAN, "--wait", "--json", cwd=tmp_path, variables=address)
         job = json.loads(done.stdout)
         assert job["state"] == "successful"
-        run(server / "fallow", "collect", job["id"], "-o", "results", cwd=tmp_path, **address)
+        run(server / "fallow", "collect", job["id"], "-o", "results", cwd=tmp_path, variables=address)
         names = sorted(path.name for path in (tmp_path / "results").iterdir())
         assert names == ["image.h5", "image.png", "report.json"]
     finally:
