@@ -2,6 +2,9 @@
 
     E u = P F (S_c u),  c = 1 ... C
 
+Where all maps are zero (outside the object) the data say nothing; there the image is measured once as zero with unit
+noise, like one more coil that sees the outside alone. That keeps the problem well posed without a hard edge.
+
 Where every sampled row is complete (1-D undersampling along the rows axis) the transform along the columns leaves the
 iteration: data are transformed along the columns once, and F acts along the rows alone.
 """
@@ -50,6 +53,8 @@ class Encoding(LinearOperator):
         # needs no shifts of the image, only the mask in the order of the plain FFT.
         self._plain_mask = np.ascontiguousarray(np.fft.ifftshift(self._mask, axes=self.axes)).astype(maps.real.dtype)
         self._conjugate_maps = maps.conj()
+        outside = ~np.any(maps != 0, axis=0)
+        self._outside = outside.astype(maps.real.dtype) if outside.any() else None
 
     def to_range(self, kspace: NDArray[Any]) -> NDArray[Any]:
         """Masked k-space (coil, rows, columns) in the space that `forward` maps to."""
@@ -71,8 +76,8 @@ class Encoding(LinearOperator):
         return images.sum(axis=0, dtype=images.dtype)
 
     def normal(self, x: NDArray[Any]) -> NDArray[Any]:
-        """E^H E x, coil by coil so that each coil's plane stays in the cache."""
-        out = np.zeros_like(x)
+        """E^H E x plus x outside the object, coil by coil so that each coil's plane stays in the cache."""
+        out = np.zeros_like(x) if self._outside is None else self._outside * x
         plane = np.empty_like(x)
         for conjugate, map_ in zip(self._conjugate_maps, self.maps, strict=True):
             np.multiply(map_, x, out=plane)
@@ -84,5 +89,6 @@ class Encoding(LinearOperator):
         return out
 
     def squared_norm_bound(self) -> float:
-        """Upper bound of ||E||^2: max over pixels of sum_c |S_c|^2, since P and F have norm one."""
-        return float(np.max(np.sum(np.abs(self.maps) ** 2, axis=0, dtype=np.float64)))
+        """Upper bound of ||E||^2, the outside included: max over pixels of sum_c |S_c|^2, since P and F have norm one."""
+        largest = float(np.max(np.sum(np.abs(self.maps) ** 2, axis=0, dtype=np.float64)))
+        return largest if self._outside is None else max(largest, 1.0)

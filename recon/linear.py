@@ -1,0 +1,110 @@
+"""Linear baselines: what users compare with."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.ndimage import uniform_filter
+
+from recon.operators.base import inner, norm
+from recon.operators.encoding import Encoding
+from recon.solver import Solution
+
+
+def density_weights(mask: NDArray[np.bool_]) -> NDArray[np.float32]:
+    """One over the local sampling density, zero where not sampled, one where fully sampled.
+
+    The density is the share of sampled positions in a window wide enough to hold some at the mean acceleration.
+
+    Parameters
+    ----------
+    mask : bool (rows, columns)
+
+    Returns
+    -------
+    float32 (rows, columns)
+    """
+    acceleration = mask.size / max(int(mask.sum()), 1)
+    is_constant = bool((mask == mask[:, :1]).all())
+    side = 2 * int(np.ceil(acceleration if is_constant else np.sqrt(acceleration))) + 1
+    window = (side, 1) if is_constant else (side, side)
+    density = uniform_filter(mask.astype(np.float64), window, mode="nearest")
+    return np.divide(mask, density, out=np.zeros(mask.shape), where=mask).astype(np.float32)
+
+
+def zero_filled(encoding: Encoding, kspace: NDArray[Any], mask: NDArray[np.bool_]) -> NDArray[Any]:
+    """u = (S^H S)^-1 S^H F^H (w y): inverse transform of density-compensated k-space, sensitivity-weighted.
+
+    Parameters
+    ----------
+    encoding : Encoding
+    kspace : complex (coil, rows, columns)
+        Whitened, in the encoding's virtual coils.
+    mask : bool (rows, columns)
+    """
+    weighted = encoding.adjoint(encoding.to_range(kspace * density_weights(mask)))
+    power = np.sum(np.abs(encoding.maps) ** 2, axis=0)
+    return np.divide(weighted, power, out=np.zeros_like(weighted), where=power > 0)
+
+
+def tikhonov(
+    encoding: Encoding,
+    data: NDArray[Any],
+    strength: float,
+    *,
+    tolerance: float,
+    max_iterations: int,
+    callback: Callable[[int, float], None] | None = None,
+) -> Solution:
+    """Minimise 1/2 ||E u - d||^2 + strength/2 ||u||^2 by conjugate gradients (Hestenes & Stiefel 1952).
+
+    Stops when ||E^H d - (E^H E + strength) u|| < tolerance ||E^H d||.
+
+    Parameters
+    ----------
+    encoding : Encoding
+    data : complex ndarray
+        In the encoding's range.
+    strength : float
+        Weight in noise units.
+    tolerance, max_iterations, callback
+        As for `recon.solver.solve`.
+
+    Returns
+    -------
+    Solution
+    """
+    b = encoding.adjoint(data)
+    x, r = np.zeros_like(b), b.copy()
+    p, rho = r.copy(), norm(r) ** 2
+    scale, energy = np.sqrt(rho), norm(data) ** 2
+    objective: list[float] = []
+    optimality = 0.0 if scale == 0 else 1.0
+    iteration = 0
+    while optimality >= tolerance and iteration < max_iterations:
+        q = encoding.normal(p) + b.real.dtype.type(strength) * p
+        alpha = rho / inner(p, q).real
+        x += b.real.dtype.type(alpha) * p
+        r -= b.real.dtype.type(alpha) * q
+        rho_next = norm(r) ** 2
+        p = r + b.real.dtype.type(rho_next / rho) * p
+        rho = rho_next
+        iteration += 1
+        optimality = float(np.sqrt(rho) / scale)
+        # for a quadratic, with residual r = b - H x: 1/2 <x, H x> - Re <b, x> = -1/2 Re <x, b + r>
+        objective.append(0.5 * (energy - inner(x, b + r).real))
+        if callback is not None:
+            callback(iteration, optimality)
+    reason = "nothing-to-solve" if scale == 0 else "optimal" if optimality < tolerance else "iteration-limit"
+    return Solution(
+        image=x,
+        padded=x,
+        dual=np.zeros((2, *x.shape), x.dtype),
+        objective=objective,
+        optimality=optimality,
+        iterations=iteration,
+        stop_reason=reason,
+    )
