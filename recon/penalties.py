@@ -26,21 +26,23 @@ def soft_threshold(v: NDArray[Any], threshold: float) -> NDArray[Any]:
     -------
     ndarray of the shape and dtype of `v`.
     """
+    if threshold == 0:
+        return v.copy()
     magnitude = np.abs(v)
-    np.maximum(magnitude, np.finfo(magnitude.dtype).tiny, out=magnitude)
-    np.divide(magnitude.dtype.type(threshold), magnitude, out=magnitude)
+    limit = magnitude.dtype.type(threshold)
+    np.maximum(magnitude, limit, out=magnitude)
+    np.divide(limit, magnitude, out=magnitude)
     np.subtract(1, magnitude, out=magnitude)
-    np.maximum(magnitude, 0, out=magnitude)
     shrunk: NDArray[Any] = v * magnitude
     return shrunk
 
 
 def project_ball(p: NDArray[Any], radius: float) -> NDArray[Any]:
-    """Nearest field with |p(r)| <= radius at every pixel; p has shape (2, rows, columns); works in place."""
+    """Nearest field with |p(r)| <= radius (> 0) at every pixel; p has shape (2, rows, columns); works in place."""
     magnitude = np.sqrt(p[0].real ** 2 + p[0].imag ** 2 + p[1].real ** 2 + p[1].imag ** 2)
-    np.maximum(magnitude, np.finfo(magnitude.dtype).tiny, out=magnitude)
-    np.divide(magnitude.dtype.type(radius), magnitude, out=magnitude)
-    np.minimum(magnitude, 1, out=magnitude)
+    limit = magnitude.dtype.type(radius)
+    np.maximum(magnitude, limit, out=magnitude)
+    np.divide(limit, magnitude, out=magnitude)
     p *= magnitude
     return p
 

@@ -1,0 +1,112 @@
+"""Facts about what was sampled: accelerations, calibration region, point-spread function."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+import scipy.fft
+from numpy.typing import NDArray
+
+from recon.coils.calibration import central_block
+from recon.findings import Finding
+
+
+class SamplingFacts:
+    """Gathers the masks of a scan, plane by plane.
+
+    Parameters
+    ----------
+    shape : (rows, columns)
+        Of a plane.
+    """
+
+    def __init__(self, shape: tuple[int, int]) -> None:
+        self.shape = shape
+        self.planes = 0
+        self.sampled = 0
+        self.calibration = shape
+        self.peak_side_lobe = 0.0
+        self.varies_along_columns = False
+        self.is_partial_echo = True
+        self._nominal: list[float] = []
+        self._seen: set[bytes] = set()
+
+    def see(self, mask: NDArray[np.bool_]) -> None:
+        """Take in one plane's mask."""
+        self.planes += 1
+        self.sampled += int(mask.sum())
+        key = np.packbits(mask).tobytes()
+        if key in self._seen:
+            return
+        self._seen.add(key)
+        rows, columns = central_block(mask)
+        if rows * columns < self.calibration[0] * self.calibration[1] or len(self._seen) == 1:
+            self.calibration = (rows, columns)
+        self.peak_side_lobe = max(self.peak_side_lobe, peak_side_lobe(mask))
+        self._nominal.append(_acceleration_outside(mask, rows, columns))
+        if not (mask == mask[:, :1]).all():
+            self.varies_along_columns = True
+            self.is_partial_echo = self.is_partial_echo and _is_partial_echo(mask)
+
+    def as_dict(self) -> dict[str, Any]:
+        """Plain JSON form."""
+        total = self.planes * self.shape[0] * self.shape[1]
+        return {
+            "sampled_fraction": self.sampled / total,
+            "net_acceleration": total / self.sampled,
+            "nominal_acceleration": float(np.mean(self._nominal)),
+            "calibration": {"rows": int(self.calibration[0]), "columns": int(self.calibration[1])},
+            "peak_side_lobe": self.peak_side_lobe,
+            "distinct_masks": len(self._seen),
+            "varies_along_readout": self.varies_along_columns,
+        }
+
+
+def peak_side_lobe(mask: NDArray[np.bool_]) -> float:
+    """Largest side-lobe of the point-spread function over its peak: max |F^-1 P|(r != 0) / |F^-1 P|(0) (Lustig 2007)."""
+    spread = np.abs(scipy.fft.ifft2(mask.astype(np.float64)))
+    peak = float(spread[0, 0])
+    spread[0, 0] = 0
+    return float(spread.max()) / peak if peak > 0 else 0.0
+
+
+def _acceleration_outside(mask: NDArray[np.bool_], rows: int, columns: int) -> float:
+    """Positions over samples, leaving the calibration block out (1 where nothing is left)."""
+    outside = np.ones(mask.shape, np.bool_)
+    if rows and columns:
+        first = tuple(n // 2 - k // 2 for n, k in zip(mask.shape, (rows, columns), strict=True))
+        outside[first[0] : first[0] + rows, first[1] : first[1] + columns] = False
+    sampled = int((mask & outside).sum())
+    return float(outside.sum()) / sampled if sampled else 1.0
+
+
+def _is_partial_echo(mask: NDArray[np.bool_]) -> bool:
+    """Whether every sampled line has the same single run of columns, which contains DC."""
+    lines = mask[mask.any(axis=1)]
+    run = lines[0]
+    edges = int(np.count_nonzero(np.diff(np.concatenate(([0], run.astype(np.int8), [0])))))
+    return bool((lines == run).all() and edges == 2 and run[mask.shape[1] // 2])
+
+
+def readout_finding(facts: SamplingFacts, plane_axes: tuple[str, str]) -> list[Finding]:
+    """The finding about a mask that varies along `kx`, if it does."""
+    if plane_axes[1] != "kx" or not facts.varies_along_columns:
+        return []
+    if facts.is_partial_echo:
+        return [
+            Finding(
+                "partial-echo",
+                "info",
+                "The mask leaves out one end of every readout (partial echo): resolution along x is lower than the matrix says.",
+                "/mask",
+            )
+        ]
+    return [
+        Finding(
+            "readout-undersampled",
+            "warning",
+            "The mask varies along kx, which no scanner can do: fine for a study, but do not read acquisition times from it.",
+            "/mask",
+        )
+    ]
