@@ -143,9 +143,9 @@ class Job:
         list of Path
             The three files.
         """
+        report = json.dumps(self.report(), indent=2, ensure_ascii=False).encode() + b"\n"
         target = Path(folder)
         target.mkdir(parents=True, exist_ok=True)
-        report = json.dumps(self.report(), indent=2, ensure_ascii=False).encode() + b"\n"
         paths = [target / "image.h5", target / "report.json", target / "image.png"]
         with tempfile.TemporaryDirectory(prefix=".collect-", dir=target) as scratch:
             kept = [Path(scratch) / path.name for path in paths]

@@ -147,7 +147,10 @@ def test_refused_token_names_the_remedy(capsys: pytest.CaptureFixture[str]) -> N
 
 
 def test_reader_that_went_away_is_no_error_message() -> None:
-    code = "import sys; from service.cli import main; sys.exit(main(['jobs', '--limit', '5000', '--url', sys.argv[1], '--token', 't']))"
+    code = (
+        "import sys\nfrom service.cli import main\n"
+        "sys.exit(main(['jobs', '--limit', '5000', '--url', sys.argv[1], '--token', 't']))"
+    )
     rows = [{**JOB, "id": f"j{number}"} for number in range(5000)]
     with scripted(answer({"items": rows, "next": None})) as service:
         process = subprocess.Popen(
