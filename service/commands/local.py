@@ -5,6 +5,7 @@ from __future__ import annotations
 import argparse
 import json
 from collections.abc import Mapping
+from functools import partial
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -63,29 +64,27 @@ def run_reconstruct(arguments: argparse.Namespace) -> int:
 
 def run_inspect(arguments: argparse.Namespace) -> int:
     """Look through all the data of a scan and say what was found."""
-    from recon.inspection import inspect
-
-    from recon.caution import CAUTION
     from recon.formats import open_scan
+    from recon.inspection import inspect
     from service.progress import ProgressLine
 
     _check_scan(arguments.scan)
     with open_scan(arguments.scan) as scan, ProgressLine() as line:
-        found = inspect(scan, progress=line.update).as_dict()
-        title = scan.title
+        line.update("inspect", 0.0)
+        found = inspect(scan, progress=partial(line.update, "inspect")).as_dict()
     if arguments.json:
-        print_json({**found, "caution": CAUTION})
+        print_json(found)
         return ExitCode.DONE
     print_facts(
         {
             "scan": arguments.scan,
-            "title": title,
+            "title": found["title"],
             "axes": ", ".join(f"{axis} {size}" for axis, size in found["axes"].items()),
             **{name.replace("_", " "): _shown(value) for name, value in found["sampling"].items()},
         }
     )
     print_findings(found["findings"])
-    print_caution(CAUTION)
+    print_caution(found["caution"])
     return ExitCode.DONE
 
 
@@ -108,6 +107,8 @@ def _verdict(verdict: Any) -> str:
 def _shown(value: Any) -> str | None:
     if value is None:
         return None
+    if isinstance(value, bool):
+        return "yes" if value else "no"
     if isinstance(value, float):
         return f"{value:.4g}"
     if isinstance(value, Mapping):
