@@ -13,7 +13,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from recon.errors import InvalidScan
-from recon.scan import Scan
+from recon.operators.fourier import inverse_transform
+from recon.scan import PlaneIndex, Scan
 
 #: eigenvalues of the covariance below this fraction of the largest are raised to it, so that a channel without any
 #: noise (a dead coil) does not get infinite weight.
@@ -33,7 +34,8 @@ class Whitening:
     Attributes
     ----------
     whitener : complex128 (coil, coil)
-        Psi^(-1/2): whitened channels = whitener @ channels. The identity, up to one scalar, where there is no noise.
+        Psi^(-1/2): whitened channels = whitener @ channels. Without noise: one over the
+        largest zero-filled image value, times the identity.
     unwhitener : complex128 (coil, coil)
         Its inverse.
     covariance : complex128 (coil, coil)
@@ -127,7 +129,7 @@ def estimate_whitening(scan: Scan) -> Whitening:
     covariance, samples, largest = periphery_covariance(scan)
     if largest == 0.0 or np.sqrt(np.trace(covariance).real / scan.coils) <= ROUNDING * largest:
         identity = np.eye(scan.coils, dtype=np.complex128)
-        unit = largest or 1.0
+        unit = max(_largest_zero_filled(scan, index) for index in scan.planes()) or 1.0
         return Whitening(identity / unit, identity * unit, identity * 0, "none", 0)
     return whitening_from(covariance, "periphery", samples)
 
@@ -166,3 +168,9 @@ def periphery_covariance(scan: Scan) -> tuple[NDArray[Any], int, float]:
         total += sample_covariance(values) * values.shape[1]
         samples += values.shape[1]
     return total / max(samples, 1), samples, largest
+
+
+def _largest_zero_filled(scan: Scan, index: PlaneIndex) -> float:
+    kspace = scan.kspace(index)
+    images = inverse_transform(kspace * scan.mask(index, kspace))
+    return float(np.sqrt(np.sum(np.abs(images) ** 2, axis=0)).max())

@@ -1,0 +1,125 @@
+"""Does the image agree with what was measured? Residual figures in noise units.
+
+    r = y - P F (S m)   in whitened physical coils;   reduced chi-squared = sum |r|^2 / M,  M complex samples
+
+A reduced chi-squared near one says that what the image leaves unexplained is as large as the noise. Coil compression
+plays no part here: the residual is taken in all coils.
+"""
+
+from __future__ import annotations
+
+from typing import Any, Final
+
+import numpy as np
+from numpy.typing import NDArray
+
+from recon.axes import OUTER_AXES
+from recon.coils.combination import sensitivity_weighted
+from recon.coils.noise import Whitening, mix
+from recon.operators.fourier import inverse_transform, transform
+from recon.scan import PlaneIndex
+
+#: width of a k-space ring, as a fraction of the distance from the centre to the edge.
+RING_WIDTH: Final = 0.1
+
+
+def residual(
+    image: NDArray[Any], whitened_maps: NDArray[Any], kspace: NDArray[Any], mask: NDArray[np.bool_]
+) -> NDArray[Any]:
+    """r = y - P F (S_c m), zero where not sampled.
+
+    Parameters
+    ----------
+    image : complex (rows, columns)
+        m, in the object's intensity.
+    whitened_maps, kspace : complex (coil, rows, columns)
+    mask : bool (rows, columns)
+    """
+    predicted = transform(whitened_maps * image)
+    return np.where(mask, kspace - predicted, 0)
+
+
+def residual_image(residuals: NDArray[Any], whitened_maps: NDArray[Any]) -> NDArray[Any]:
+    """Sensitivity-weighted inverse transform of the residual, in the image's units (rows, columns)."""
+    return sensitivity_weighted(inverse_transform(residuals), whitened_maps)
+
+
+class ResidualFigures:
+    """Sums residuals plane by plane and turns them into figures.
+
+    Parameters
+    ----------
+    shape : (rows, columns)
+        Of a plane.
+    whitening : Whitening
+        Its covariance was estimated from n samples of C coils, which inflates the statistic by n / (n - C); the
+        figures are corrected for that.
+    sizes : dict
+        Lengths of the scan's outer axes.
+    """
+
+    def __init__(self, shape: tuple[int, int], whitening: Whitening, sizes: dict[str, int]) -> None:
+        self.whitening = whitening
+        coils = len(whitening.covariance)
+        samples = whitening.samples
+        self.correction = (samples - coils) / samples if samples > coils else 1.0
+        radius = np.hypot(*(_normalised_distance(n, axis) for axis, n in enumerate(shape)))
+        self.ring = np.minimum((radius / RING_WIDTH + 1e-9).astype(int), int(np.sqrt(2) / RING_WIDTH))
+        self.rings = int(self.ring.max()) + 1
+        self.by_ring = np.zeros((2, self.rings))
+        self.by_coil = np.zeros((2, coils))
+        self.by_outer = {axis: np.zeros((2, sizes[axis])) for axis in OUTER_AXES if axis in sizes}
+        self.total = np.zeros(2)
+        self.energy = 0.0
+
+    def see(
+        self, index: PlaneIndex, residuals: NDArray[Any], kspace: NDArray[Any], mask: NDArray[np.bool_]
+    ) -> None:
+        """Take in the whitened residual of one plane, (coil, rows, columns)."""
+        squares = np.abs(residuals) ** 2
+        per_position = squares.sum(axis=0, dtype=np.float64)
+        coils, positions = len(residuals), int(mask.sum())
+        whole = np.array([per_position.sum(), coils * positions])
+        self.total += whole
+        self.energy += float(np.sum(np.abs(kspace[:, mask]) ** 2, dtype=np.float64))
+        rings = self.ring[mask]
+        self.by_ring[0] += np.bincount(rings, per_position[mask], self.rings)
+        self.by_ring[1] += coils * np.bincount(rings, minlength=self.rings)
+        physical = mix(self.whitening.unwhitener, residuals)
+        self.by_coil[0] += np.sum(np.abs(physical) ** 2, axis=(1, 2), dtype=np.float64)
+        self.by_coil[1] += positions * np.real(np.diag(self.whitening.covariance))
+        for axis, sums in self.by_outer.items():
+            sums[:, getattr(index, axis)] += whole
+
+    def as_dict(self) -> dict[str, Any]:
+        """The report's `consistency`; chi-squared figures are null where the scan is free of noise."""
+        relative = float(np.sqrt(self.total[0] / self.energy)) if self.energy > 0 else 0.0
+        if not self.whitening.has_noise_units:
+            return {"reduced_chi_squared": None, "relative_residual": relative}
+        rings = [
+            {
+                "from": round(ring * RING_WIDTH, 6),
+                "to": round((ring + 1) * RING_WIDTH, 6),
+                "value": self.correction * float(self.by_ring[0, ring] / self.by_ring[1, ring]),
+                "samples": int(self.by_ring[1, ring]),
+            }
+            for ring in range(self.rings)
+            if self.by_ring[1, ring] > 0
+        ]
+        figures: dict[str, Any] = {
+            "value": self.correction * float(self.total[0] / self.total[1]),
+            "samples": int(self.total[1]),
+            "by_coil": self._ratios(self.by_coil),
+            "by_ring": rings,
+        }
+        for axis, sums in self.by_outer.items():
+            figures[f"by_{axis}"] = self._ratios(sums)
+        return {"reduced_chi_squared": figures, "relative_residual": relative}
+
+    def _ratios(self, sums: NDArray[Any]) -> list[float | None]:
+        return [self.correction * float(a / b) if b > 0 else None for a, b in sums.T]
+
+
+def _normalised_distance(n: int, axis: int) -> NDArray[np.float64]:
+    distance = (np.arange(n) - n // 2) / max(n / 2, 1)
+    return distance.reshape((-1, 1) if axis == 0 else (1, -1))

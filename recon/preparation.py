@@ -1,0 +1,215 @@
+"""What has to be known of a whole scan before the first plane is solved: facts, whitener, virtual coils, noise units."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from typing import Any, Final
+
+import numpy as np
+from numpy.typing import NDArray
+
+from recon.coils.calibration import LARGEST_BLOCK, calibration_block, check_block, crop_block
+from recon.coils.compression import Compression
+from recon.coils.maps import MapMaker, MapMethod, squared_gain
+from recon.coils.noise import Whitening, estimate_whitening
+from recon.inspection import Inspection, Inspector, check_job, needs_maps
+from recon.operators.fourier import crop_readout
+from recon.scan import PlaneIndex, Scan, cropped_readout
+from recon.settings import Settings
+from recon.strengths import resolve_strengths
+
+#: frames and contrasts of one slice that share in its calibration.
+BLOCKS_PER_SLICE: Final = 8
+
+Report = Callable[[str, float], None]
+
+
+@dataclass(frozen=True)
+class Preparation:
+    """Everything that the planes share.
+
+    Attributes
+    ----------
+    settings : Settings
+        As resolved: no strength or map method is `auto` any more.
+    shape : (rows, columns)
+        Of a plane as it is solved; `image_columns` of them are kept.
+    kappa : float
+        u = kappa m: noise units over image units.
+    blocks : dict
+        Raw calibration blocks by slice.
+    """
+
+    scan: Scan
+    settings: Settings
+    inspection: Inspection
+    whitening: Whitening
+    compression: Compression
+    map_method: MapMethod | None
+    shape: tuple[int, int]
+    image_columns: int
+    kappa: float
+    blocks: dict[int, list[NDArray[Any]]]
+
+    def map_maker(self) -> MapMaker:
+        """The maker of each slice's maps."""
+        assert self.map_method is not None
+        return MapMaker(self.scan, self.map_method, self.whitening, self.compression, self.shape)
+
+    def whitened_blocks(self, position: int) -> list[NDArray[Any]]:
+        """Whitened calibration blocks of one slice."""
+        return [self.whitening.apply(block) for block in self.blocks[position]]
+
+    def load(self, index: PlaneIndex) -> tuple[NDArray[Any], NDArray[np.bool_]]:
+        """Whitened samples (coil, rows, columns) of one plane, readout oversampling removed, and their mask."""
+        raw = self.scan.kspace(index)
+        mask = self.scan.mask(index, raw)
+        kspace = self.whitening.apply(crop_readout(raw * mask, self.shape[1]))
+        if self.shape[1] != mask.shape[1]:
+            mask = np.broadcast_to(mask[:, :1], self.shape)
+        return kspace, mask
+
+    def figures(self) -> dict[str, Any]:
+        """The stages' own figures for the report."""
+        return {
+            "whitening": {"source": self.whitening.source, "samples": self.whitening.samples},
+            "readout_crop": {"from": self.scan.plane_shape[1], "to": self.image_columns},
+            "coil_compression": {
+                "coils": self.scan.coils,
+                "virtual_coils": self.compression.coils,
+                "kept_energy": self.compression.kept_energy,
+            },
+            "coil_maps": {"method": self.map_method or "none"},
+            "noise_units": {"kappa": self.kappa, "known": self.whitening.has_noise_units},
+        }
+
+
+def prepare(scan: Scan, settings: Settings, report: Report) -> Preparation:
+    """Read a scan once and work out what its planes share.
+
+    Parameters
+    ----------
+    scan : Scan
+    settings : Settings
+    report : callable
+        Called as report(stage, fraction of that stage).
+
+    Raises
+    ------
+    InvalidScan
+        For content that cannot be reconstructed, a missing calibration region included.
+    InvalidSettings
+        For settings that do not fit the scan.
+    """
+    method = _map_method(scan, settings)
+    inspection, blocks = _read(scan, method, report)
+    check_job(inspection.as_dict(), settings)
+    report("whiten", 0.0)
+    whitening = estimate_whitening(scan)
+    resolved = resolve_strengths(settings, has_noise_units=whitening.has_noise_units)
+    report("crop", 0.0)
+    shape = _solved_shape(scan)
+    report("compress", 0.0)
+    gram = np.zeros((scan.coils, scan.coils), np.complex128)
+    for block in (block for of_slice in blocks.values() for block in of_slice):
+        samples = whitening.apply(block).reshape(scan.coils, -1).astype(np.complex128)
+        gram += samples @ samples.conj().T / samples.shape[1]
+    gram /= sum(len(of_slice) for of_slice in blocks.values())
+    rule = None if method == "single-coil" else resolved.coil_compression
+    compression = Compression(gram, rule, has_noise_units=whitening.has_noise_units)
+    if method is not None:
+        resolved = resolved.model_copy(update={"coil_maps": settings.coil_maps if method == "single-coil" else method})
+    return Preparation(
+        scan=scan,
+        settings=resolved,
+        inspection=inspection,
+        whitening=whitening,
+        compression=compression,
+        map_method=method,
+        shape=shape,
+        image_columns=cropped_readout(scan),
+        kappa=_noise_units(whitening, compression, blocks),
+        blocks=blocks,
+    )
+
+
+def _map_method(scan: Scan, settings: Settings) -> MapMethod | None:
+    if not needs_maps(settings, scan.coils):
+        return "single-coil" if scan.coils == 1 and scan.sensitivity_array is None else None
+    if settings.coil_maps == "auto":
+        return "supplied" if scan.sensitivity_array is not None else "eigenvector"
+    return settings.coil_maps
+
+
+def _solved_shape(scan: Scan) -> tuple[int, int]:
+    """Rows and columns of a plane as it is solved.
+
+    A mask that varies along kx leaves readouts incomplete: they cannot be transformed, and so not cropped, before the
+    solve.
+    """
+    rows, encoded = scan.plane_shape
+    columns = cropped_readout(scan)
+    if columns == encoded or scan.mask_array is None or "kx" not in scan.mask_array.axes:
+        return rows, columns
+    masks = (scan.mask_array.take(**index._asdict()) for index in scan.planes())
+    is_complete = all((mask == mask[..., :1]).all() for mask in masks)
+    return rows, columns if is_complete else encoded
+
+
+def _read(scan: Scan, method: MapMethod | None, report: Report) -> tuple[Inspection, dict[int, list[NDArray[Any]]]]:
+    """The one pass over all data: facts, and each slice's calibration blocks."""
+    inspector = Inspector(scan)
+    blocks: dict[int, list[NDArray[Any]]] = {}
+    planes = scan.planes()
+    shared = len(planes) // scan.axes.get("slice", 1)
+    chosen = {round(step * shared / BLOCKS_PER_SLICE) for step in range(BLOCKS_PER_SLICE)} if shared else {0}
+    for done, index in enumerate(planes):
+        report("read" if done == 0 else "inspect", done / len(planes))
+        kspace = scan.kspace(index)
+        mask = scan.mask(index, kspace)
+        inspector.see(index, kspace, mask)
+        if done % shared in chosen:
+            of_slice = blocks.setdefault(index.slice, [])
+            if scan.reference_array is None:
+                of_slice.append(_block(scan, kspace, mask, must_be_full=method in ("eigenvector", "adaptive")))
+            elif not of_slice:
+                of_slice.append(_reference_block(scan, index.slice))
+    return inspector.finish(), blocks
+
+
+def _block(scan: Scan, kspace: NDArray[Any], mask: NDArray[np.bool_], *, must_be_full: bool) -> NDArray[Any]:
+    """Raw central block of one plane, readout oversampling removed where readouts are complete."""
+    columns = _solved_shape(scan)[1]
+    if columns != mask.shape[1]:
+        rows = min(2 * LARGEST_BLOCK, mask.shape[0])
+        centre = crop_block(mask, rows, mask.shape[1])
+        kspace = crop_readout(crop_block(kspace, rows, mask.shape[1]) * centre, columns)
+        mask = np.broadcast_to(centre[:, :1], (rows, columns))
+    if must_be_full:
+        return calibration_block(kspace, mask)
+    # only the coils' mutual strength is wanted, which gaps do not change
+    sides = tuple(min(LARGEST_BLOCK, n) for n in mask.shape)
+    return crop_block(kspace * mask, *sides)
+
+
+def _reference_block(scan: Scan, position: int) -> NDArray[Any]:
+    reference = scan.reference(position)
+    assert reference is not None
+    columns = scan.plane_shape[1] / cropped_readout(scan)
+    kept = max(1, round(reference.shape[2] / columns))
+    cropped = crop_readout(reference, kept)
+    rows, kept = cropped.shape[1:]
+    check_block(rows, kept, (scan.plane_shape[0], cropped_readout(scan)), "/reference")
+    return crop_block(cropped, min(rows, LARGEST_BLOCK), min(kept, LARGEST_BLOCK))
+
+
+def _noise_units(
+    whitening: Whitening, compression: Compression, blocks: dict[int, list[NDArray[Any]]]
+) -> float:
+    """kappa: the square root of the mean over the object of S^H Psi^-1 S."""
+    total, count = 0.0, 0.0
+    for block in (block for of_slice in blocks.values() for block in of_slice):
+        part = squared_gain(whitening.apply(block), whitening, compression)
+        total, count = total + part[0], count + part[1]
+    return float(np.sqrt(total / count)) if count else 1.0

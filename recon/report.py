@@ -1,0 +1,127 @@
+"""The data-consistency report, as plain JSON with a versioned schema."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Any, Final
+
+from recon.caution import CAUTION
+from recon.consistency import ResidualFigures
+from recon.findings import Finding
+from recon.operators.wavelet import Wavelet
+from recon.preparation import Preparation
+from recon.scan import PlaneIndex
+from recon.solver import Solution
+
+SCHEMA_VERSION: Final = 1
+#: values of the objective kept for each plane: enough to draw the curve.
+HISTORY_LENGTH: Final = 32
+
+
+class SolverFigures:
+    """Convergence of every plane."""
+
+    def __init__(self) -> None:
+        self.planes: list[dict[str, Any]] = []
+
+    def see(self, index: PlaneIndex, solution: Solution | None) -> None:
+        """Take in one plane's solution."""
+        if solution is None:
+            return
+        history = solution.objective
+        step = max(1, -(-len(history) // HISTORY_LENGTH))
+        self.planes.append(
+            {
+                **index._asdict(),
+                "iterations": solution.iterations,
+                "stop_reason": solution.stop_reason,
+                "optimality": solution.optimality,
+                "objective": [float(f"{value:.7g}") for value in (*history[:-1:step], *history[-1:])],
+                "objective_every": step,
+            }
+        )
+
+    def as_dict(self, preparation: Preparation) -> dict[str, Any]:
+        """The report's `solver`."""
+        settings = preparation.settings
+        return {
+            "method": settings.method,
+            "planes": self.planes,
+            "converged_planes": sum(plane["stop_reason"] != "iteration-limit" for plane in self.planes),
+            "iterations": sum(plane["iterations"] for plane in self.planes),
+            "worst_optimality": max((plane["optimality"] for plane in self.planes), default=None),
+            "tolerance": settings.tolerance,
+        }
+
+    def findings(self, preparation: Preparation) -> list[Finding]:
+        """What the solve has to say."""
+        found: list[Finding] = []
+        settings = preparation.settings
+        short = [plane for plane in self.planes if plane["stop_reason"] == "iteration-limit"]
+        if short:
+            worst = max(plane["optimality"] for plane in short)
+            found.append(
+                Finding(
+                    "not-converged",
+                    "warning",
+                    f"{len(short)} of {len(self.planes)} planes stopped at {settings.max_iterations} iterations with "
+                    f"optimality {worst:.1e} above the tolerance {settings.tolerance:.1e}: raise max_iterations.",
+                    "solver",
+                    {"planes": len(short), "optimality": worst},
+                )
+            )
+        uses_wavelet = settings.method == "compressed-sensing" and settings.wavelet_strength != 0
+        if uses_wavelet and Wavelet(preparation.shape, settings.wavelet).levels == 0:
+            rows, columns = preparation.shape
+            found.append(
+                Finding(
+                    "wavelet-too-long",
+                    "warning",
+                    f"The wavelet {settings.wavelet} does not fit a plane of {rows} x {columns}, so the wavelet penalty has no "
+                    f"effect: choose a shorter one such as haar.",
+                    "solver",
+                )
+            )
+        return found
+
+
+def build_report(
+    preparation: Preparation,
+    residuals: ResidualFigures,
+    solver: SolverFigures,
+    provenance: Mapping[str, Any],
+) -> dict[str, Any]:
+    """Put the stages' figures together.
+
+    Returns
+    -------
+    dict
+        Keys of the published schema: `schema_version caution findings consistency solver sampling preparation
+        settings provenance`.
+    """
+    inspection = preparation.inspection
+    findings = [*inspection.findings, *solver.findings(preparation)]
+    figures = residuals.as_dict()
+    if preparation.map_method is None:
+        figures = {"reduced_chi_squared": None, "relative_residual": None}
+    if not preparation.whitening.has_noise_units:
+        findings.append(
+            Finding(
+                "noise-free",
+                "info",
+                "The scan holds no measurable noise, so strengths are fractions of the largest zero-filled image value and "
+                "the residual has no noise to be compared with.",
+                "/kspace",
+            )
+        )
+    return {
+        "schema_version": SCHEMA_VERSION,
+        "caution": CAUTION,
+        "findings": [finding.as_dict() for finding in findings],
+        "consistency": figures,
+        "solver": solver.as_dict(preparation),
+        "sampling": inspection.sampling,
+        "preparation": preparation.figures(),
+        "settings": preparation.settings.model_dump(mode="json"),
+        "provenance": dict(provenance),
+    }
