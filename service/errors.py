@@ -94,6 +94,10 @@ class Refused(ServiceError, ValueError):
     """Content that was understood and cannot be accepted."""
 
 
+class ScanRefused(Refused):
+    """An uploaded file that is no acceptable scan."""
+
+
 class Unavailable(ServiceError):
     """The service cannot do this at the moment."""
 
@@ -108,6 +112,7 @@ class ProblemKind:
 
 
 INTERNAL: Final = ProblemKind(500, "internal", "The service failed")
+INVALID_SCAN: Final = ProblemKind(422, "invalid-scan", "The scan is refused")
 COMPUTING_DIED: Final = ProblemKind(500, "computing-died", "The computing process died twice")
 WORKERS_DIED: Final = ProblemKind(500, "workers-died", "The workers carrying out the job died")
 INSUFFICIENT_MEMORY: Final = ProblemKind(
@@ -128,10 +133,11 @@ KINDS: Final[Mapping[type[BaseException], ProblemKind]] = {
     RangeNotSatisfiable: ProblemKind(416, "range-not-satisfiable", "The range lies outside the file"),
     Misdirected: ProblemKind(421, "misdirected", "This service does not answer to that host name"),
     Refused: ProblemKind(422, "refused", "The content is refused"),
+    ScanRefused: INVALID_SCAN,
     CalibrationMissing: ProblemKind(
         422, "calibration-missing", "Coil maps cannot be estimated from this scan"
     ),
-    InvalidScan: ProblemKind(422, "invalid-scan", "The scan is refused"),
+    InvalidScan: INVALID_SCAN,
     InvalidSettings: ProblemKind(422, "invalid-settings", "The settings are refused"),
     ReconError: ProblemKind(422, "not-reconstructable", "The scan cannot be reconstructed so"),
     Unavailable: UNAVAILABLE,

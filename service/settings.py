@@ -84,7 +84,9 @@ class ServiceSettings:
             A variable that cannot be used.
         """
         variables = os.environ if environment is None else environment
-        named = tuple(name.strip().lower() for name in variables.get("FALLOW_HOSTS", "").split(",") if name.strip())
+        named = tuple(
+            name.strip().lower() for name in variables.get("FALLOW_HOSTS", "").split(",") if name.strip()
+        )
         every = dict.fromkeys((*LOCAL_HOSTS, *named, *(name.lower() for name in hosts)))
         return cls(
             data=data_folder(data, environment=variables),
@@ -172,5 +174,7 @@ def _bytes(variables: Mapping[str, str], name: str, default: int) -> int:
     if not text:
         return default
     if not text.isascii() or not text.isdigit() or int(text) == 0:
-        raise SettingError(f"{name} is {text!r}; accepted is a positive whole number of bytes, such as {default}")
+        raise SettingError(
+            f"{name} is {text!r}; accepted is a positive whole number of bytes, such as {default}"
+        )
     return int(text)

@@ -61,10 +61,9 @@ class JobQueue:
         """Remove the engine's memory of a finished job."""
         self._client.delete_workflow(job_id)
 
-    def is_reachable(self) -> bool:
-        """Whether the engine's database answers."""
+    def check(self) -> None:
+        """Make sure that the engine's database answers; raises what is wrong otherwise."""
         self._client.check_connection()
-        return True
 
     def start_sweeping(self) -> None:
         """Look for forgotten jobs at intervals, from a thread of its own, until `close`."""
@@ -121,8 +120,10 @@ class JobQueue:
         )
 
     def _sweep_repeatedly(self) -> None:
-        while not self._stop.wait(self._sweep_seconds):
+        while True:
             try:
                 self.sweep()
             except Exception:
                 log.exception("the sweep of the queue failed and is tried again")
+            if self._stop.wait(self._sweep_seconds):
+                return

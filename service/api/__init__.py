@@ -1,0 +1,1 @@
+"""The HTTP interface, one module for each resource: parse, call, return."""

@@ -1,0 +1,142 @@
+"""`fallow serve`: the HTTP interface in this process, local workers as child processes that end with it."""
+
+from __future__ import annotations
+
+import asyncio
+import logging
+import os
+import signal
+import time
+from types import FrameType
+from typing import Final
+
+import uvicorn
+from fastapi import FastAPI
+
+from recon.caution import CAUTION
+from service.app import create_app
+from service.logs import configure_logging
+from service.process import how_it_ended, python_command
+from service.provenance import fallow_version
+from service.settings import LOCAL_HOSTS, ServiceSettings, child_environment
+
+log = logging.getLogger("fallow")
+
+#: Open answers get this long when the service is stopped.
+_GRACE_SECONDS: Final = 5
+_WORKER_GRACE_SECONDS: Final = 15.0
+#: A worker that lived shorter than this is started again with growing pauses.
+_SHORT_LIFE_SECONDS: Final = 10.0
+_LONGEST_PAUSE_SECONDS: Final = 30.0
+
+
+def run_service(settings: ServiceSettings, host: str, port: int, workers: int) -> None:
+    """Serve until SIGTERM or SIGINT.
+
+    Parameters
+    ----------
+    settings : ServiceSettings
+    host, port
+        Where to listen; port 0 takes a free one.
+    workers : int
+        Local worker processes; one that dies is started again.
+
+    Raises
+    ------
+    OSError
+        The address is taken, or not one of this machine.
+    SettingError
+        Another service uses the data folder, or its token file cannot be used.
+    """
+    configure_logging()
+    os.umask(0o077)
+    asyncio.run(_serve(settings, host, port, workers))
+
+
+async def _serve(settings: ServiceSettings, host: str, port: int, workers: int) -> None:
+    app = create_app(settings)
+    config = uvicorn.Config(
+        app,
+        host=host,
+        port=port,
+        log_config=None,
+        access_log=False,
+        server_header=False,
+        # Errors at the start are raised, not logged.
+        lifespan="off",
+        timeout_graceful_shutdown=_GRACE_SECONDS,
+    )
+    listener = config.bind_socket()
+    try:
+        async with app.router.lifespan_context(app):
+            server = _Server(config, app)
+            supervisors = [asyncio.create_task(_keep_worker(settings)) for _ in range(workers)]
+            address, taken = listener.getsockname()[:2]
+            shown = f"[{address}]" if ":" in address else address
+            log.info("Fallow %s listens on http://%s:%d", fallow_version(), shown, taken)
+            log.info("data folder %s, token in %s", settings.data, settings.token_file)
+            log.info("%s", CAUTION)
+            if address not in {"127.0.0.1", "::1"} and settings.hosts == LOCAL_HOSTS:
+                log.warning(
+                    "other machines are answered once FALLOW_HOSTS names the host name that they call"
+                )
+            try:
+                await server.serve(sockets=[listener])
+            finally:
+                for supervisor in supervisors:
+                    supervisor.cancel()
+                await asyncio.gather(*supervisors, return_exceptions=True)
+        log.info("stopped")
+    finally:
+        listener.close()
+
+
+class _Server(uvicorn.Server):
+    """Lets those who wait for jobs go as soon as it is asked to stop, so that stopping does not wait for them."""
+
+    def __init__(self, config: uvicorn.Config, app: FastAPI) -> None:
+        super().__init__(config)
+        self._app = app
+
+    def handle_exit(self, sig: int, frame: FrameType | None) -> None:
+        """Take the signal."""
+        self._app.state.services.watch.close()
+        super().handle_exit(sig, frame)
+
+
+async def _keep_worker(settings: ServiceSettings) -> None:
+    """Run a worker, and another when it dies, until cancelled."""
+    pause = 1.0
+    while True:
+        started = time.monotonic()
+        worker = await asyncio.create_subprocess_exec(
+            *python_command("service.worker", str(settings.data), str(os.getpid())),
+            stdin=asyncio.subprocess.DEVNULL,
+            env=child_environment(),
+            # A key pressed in the terminal reaches the service alone, which then stops its workers in good order.
+            start_new_session=True,
+        )
+        try:
+            returncode = await worker.wait()
+        except asyncio.CancelledError:
+            await _end(worker)
+            raise
+        pause = (
+            0.2
+            if time.monotonic() - started > _SHORT_LIFE_SECONDS
+            else min(2 * pause, _LONGEST_PAUSE_SECONDS)
+        )
+        log.warning("a worker ended by %s; another one starts in %.1f s", how_it_ended(returncode), pause)
+        await asyncio.sleep(pause)
+
+
+async def _end(worker: asyncio.subprocess.Process) -> None:
+    """Ask a worker to stop, and make it when it does not."""
+    if worker.returncode is not None:
+        return
+    worker.send_signal(signal.SIGTERM)
+    try:
+        await asyncio.wait_for(worker.wait(), _WORKER_GRACE_SECONDS)
+    except TimeoutError:
+        worker.kill()
+        await worker.wait()
