@@ -20,7 +20,10 @@ def add_commands(commands: _Commands) -> None:
     serve = commands.add_parser("serve", help="start the service and one local worker")
     serve.add_argument("--host", default=DEFAULT_HOST, help="address to listen on (default: %(default)s)")
     serve.add_argument(
-        "--port", type=_port, default=DEFAULT_PORT, help="port to listen on (default: %(default)s)"
+        "--port",
+        type=_port,
+        default=DEFAULT_PORT,
+        help="port to listen on, 0 for a free one (default: %(default)s)",
     )
     serve.add_argument(
         "--workers", type=_count, default=1, metavar="N", help="local worker processes (default: %(default)s)"
@@ -73,8 +76,10 @@ def _check_server_packages() -> None:
 
 
 def _port(text: str) -> int:
-    if not text.isdecimal() or not 0 < int(text) < 65536:
-        raise argparse.ArgumentTypeError(f"expected a port from 1 to 65535, received {text!r}")
+    if not text.isdecimal() or int(text) > 65535:
+        raise argparse.ArgumentTypeError(
+            f"expected a port from 1 to 65535, or 0 for a free one, received {text!r}"
+        )
     return int(text)
 
 

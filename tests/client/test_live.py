@@ -195,7 +195,7 @@ def test_command_on_an_unfinished_job(here: Live, tmp_path: Path, capsys: pytest
     assert json.loads(capsys.readouterr().out)["id"] == job["id"]
 
 
-@pytest.mark.parametrize("name", BAD_SCANS)
+@pytest.mark.parametrize("name", ["not HDF5", "empty", "unknown axis", "NaN", "no calibration region"])
 def test_bad_scan_is_exit_code_2(
     here: Live, tmp_path: Path, capsys: pytest.CaptureFixture[str], name: str
 ) -> None:
@@ -204,7 +204,7 @@ def test_bad_scan_is_exit_code_2(
     assert main(["submit", str(tmp_path / "scan.h5")]) == 2
     out, err = capsys.readouterr()
     assert (out, err.count("\n")) == ("", 1)
-    assert word in err
+    assert word.casefold() in err.casefold()
 
 
 @pytest.mark.parametrize(
