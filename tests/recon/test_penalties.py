@@ -70,7 +70,7 @@ def test_wavelet_prox_minimises_its_objective_and_reports_the_value(shape: tuple
     assert value == pytest.approx(penalty.value(x), rel=1e-9)
 
     def objective(u: np.ndarray) -> float:
-        return 0.5 * np.linalg.norm(u - v) ** 2 + 0.6 * penalty.value(u)
+        return 0.5 * float(np.linalg.norm(u - v)) ** 2 + 0.6 * penalty.value(u)
 
     lowest = objective(x)
     for size in (1e-4, 1e-2, 1):

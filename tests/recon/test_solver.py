@@ -5,10 +5,10 @@ from __future__ import annotations
 from functools import lru_cache
 from typing import Any
 
-import cvxpy as cp
+import cvxpy
 import numpy as np
 import pytest
-from skimage.restoration import denoise_tv_chambolle
+import skimage.restoration
 
 from recon.operators.differences import Differences
 from recon.operators.encoding import Encoding
@@ -26,6 +26,10 @@ from tests.recon.helpers import (
     radial_mask,
 )
 from tests.recon.operators import dense
+
+# Neither program is typed throughout.
+cp: Any = cvxpy
+denoise_tv_chambolle: Any = skimage.restoration.denoise_tv_chambolle
 
 
 def small_problem(
