@@ -35,7 +35,9 @@ class InvalidSettings(ReconError, ValueError):
 
     def __init__(self, errors: list[SettingsProblem]) -> None:
         self.errors = errors
-        super().__init__("; ".join(f"{e['pointer'].lstrip('/') or 'settings'}: {e['detail']}" for e in errors))
+        super().__init__(
+            "; ".join(f"{e['pointer'].lstrip('/') or 'settings'}: {e['detail']}" for e in errors)
+        )
 
 
 class Cancelled(ReconError):

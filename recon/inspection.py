@@ -83,9 +83,15 @@ class Inspector:
         """
         where = _where(self.scan, index)
         if not np.isfinite(kspace.view(np.float32)).all():
-            raise InvalidScan(f"/kspace contains NaN or Inf{where}; write finite numbers in single-precision range")
+            raise InvalidScan(
+                f"/kspace contains NaN or Inf{where}; write finite numbers in single-precision range"
+            )
         if not mask.any():
-            what = "the mask is false everywhere" if self.scan.mask_array is not None else "/kspace holds only zeros"
+            what = (
+                "the mask is false everywhere"
+                if self.scan.mask_array is not None
+                else "/kspace holds only zeros"
+            )
             raise InvalidScan(f"{what}{where}; a plane needs at least one sampled position")
         self.sampling.see(mask)
         holds = np.any(kspace != 0, axis=0)
@@ -137,7 +143,8 @@ class Inspector:
                 Finding(
                     "mask-inferred",
                     "warning",
-                    "The scan has no /mask, so positions holding only zeros count as not sampled: write /mask to be sure.",
+                    "The scan has no /mask, so positions holding only zeros count as not sampled: write /mask to be "
+                    "sure.",
                     "/mask",
                 )
             )
@@ -146,8 +153,8 @@ class Inspector:
                 Finding(
                     "noise-missing",
                     "warning",
-                    "The scan has no /noise, so the noise is estimated from the k-space periphery and the residual cannot "
-                    "be judged against it: add noise-only readouts.",
+                    "The scan has no /noise, so the noise is estimated from the k-space periphery and the residual "
+                    "cannot be judged against it: add noise-only readouts.",
                     "/noise",
                 )
             )
@@ -156,8 +163,8 @@ class Inspector:
                 Finding(
                     "samples-outside-mask",
                     "info",
-                    f"{self.outside} positions hold samples outside the mask and are ignored: intended when undersampling "
-                    f"retrospectively, else correct /mask.",
+                    f"{self.outside} positions hold samples outside the mask and are ignored: intended when "
+                    f"undersampling retrospectively, else correct /mask.",
                     "/mask",
                     {"positions": self.outside, "planes": self.outside_planes},
                 )
@@ -179,8 +186,15 @@ class Inspector:
 
     def _calibration_finding(self) -> list[Finding]:
         rows, columns = self.sampling.calibration
-        is_small = any(min(COMFORTABLE_BLOCK, n) > have for n, have in zip(self.scan.plane_shape, (rows, columns), strict=True))
-        if self.scan.coils == 1 or self.scan.reference_array is not None or self.scan.sensitivity_array is not None:
+        is_small = any(
+            min(COMFORTABLE_BLOCK, n) > have
+            for n, have in zip(self.scan.plane_shape, (rows, columns), strict=True)
+        )
+        if (
+            self.scan.coils == 1
+            or self.scan.reference_array is not None
+            or self.scan.sensitivity_array is not None
+        ):
             return []
         if not is_small:
             return []
@@ -188,8 +202,8 @@ class Inspector:
             Finding(
                 "calibration-small",
                 "warning",
-                f"The fully sampled centre of k-space is {rows} x {columns}; coil maps want {COMFORTABLE_BLOCK} or more a "
-                f"side and need {SMALLEST_BLOCK}: sample more lines about the centre, add /reference or supply maps.",
+                f"The fully sampled centre of k-space is {rows} x {columns}; coil maps want {COMFORTABLE_BLOCK} or "
+                f"more a side and need {SMALLEST_BLOCK}: sample more lines about the centre, add /reference or supply maps.",
                 "/mask",
                 {"rows": rows, "columns": columns},
             )
@@ -233,10 +247,18 @@ def inspect(scan: Scan, progress: Callable[[float], None] | None = None) -> Insp
         inspector.see(index, kspace, scan.mask(index, kspace))
         if progress is not None:
             progress(done / len(planes))
-    for name, array in (("/noise", scan.noise_array), ("/reference", scan.reference_array), ("/sensitivity", scan.sensitivity_array)):
-        for position in range(scan.axes.get("slice", 1) if array is not None and "slice" in array.axes else 1):
+    for name, array in (
+        ("/noise", scan.noise_array),
+        ("/reference", scan.reference_array),
+        ("/sensitivity", scan.sensitivity_array),
+    ):
+        for position in range(
+            scan.axes.get("slice", 1) if array is not None and "slice" in array.axes else 1
+        ):
             if array is not None and not np.isfinite(array.take(slice=position).view(np.float32)).all():
-                raise InvalidScan(f"{name} contains NaN or Inf; write finite numbers in single-precision range")
+                raise InvalidScan(
+                    f"{name} contains NaN or Inf; write finite numbers in single-precision range"
+                )
     return inspector.finish()
 
 
@@ -261,12 +283,22 @@ def check_job(facts: Mapping[str, Any], settings: Settings) -> None:
     wanted = getattr(rule, "coils", None)
     if wanted is not None and wanted > coils:
         raise InvalidSettings(
-            [{"pointer": "/coil_compression", "detail": f"received {wanted} coils for a scan with {coils}; accepted is up to that"}]
+            [
+                {
+                    "pointer": "/coil_compression",
+                    "detail": f"received {wanted} coils for a scan with {coils}; accepted is up to that",
+                }
+            ]
         )
     has_maps = bool(facts["objects"]["sensitivity"])
     if settings.coil_maps == "supplied" and not has_maps:
         raise InvalidSettings(
-            [{"pointer": "/coil_maps", "detail": "received supplied, but the scan has no /sensitivity; add maps or choose eigenvector"}]
+            [
+                {
+                    "pointer": "/coil_maps",
+                    "detail": "received supplied, but the scan has no /sensitivity; add maps or choose eigenvector",
+                }
+            ]
         )
     if not needs_maps(settings, coils) or (has_maps and settings.coil_maps in ("auto", "supplied")):
         return
@@ -283,5 +315,3 @@ def needs_maps(settings: Settings, coils: int) -> bool:
     """Whether a reconstruction with these settings uses coil maps at all."""
     is_coilwise = settings.method == "zero-filled" and settings.combination == "root-sum-of-squares"
     return coils > 1 and not is_coilwise
-
-

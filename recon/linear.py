@@ -11,7 +11,7 @@ from scipy.ndimage import uniform_filter
 
 from recon.operators.base import inner, norm
 from recon.operators.encoding import Encoding
-from recon.solver import Solution
+from recon.solver import Solution, StopReason
 
 
 def density_weights(mask: NDArray[np.bool_]) -> NDArray[np.float32]:
@@ -32,7 +32,7 @@ def density_weights(mask: NDArray[np.bool_]) -> NDArray[np.float32]:
     side = 2 * int(np.ceil(acceleration if is_constant else np.sqrt(acceleration))) + 1
     window = (side, 1) if is_constant else (side, side)
     density = uniform_filter(mask.astype(np.float64), window, mode="nearest")
-    return np.divide(mask, density, out=np.zeros(mask.shape), where=mask).astype(np.float32)
+    return np.asarray(np.divide(mask, density, out=np.zeros(mask.shape), where=mask), np.float32)
 
 
 def zero_filled(encoding: Encoding, kspace: NDArray[Any], mask: NDArray[np.bool_]) -> NDArray[Any]:
@@ -47,7 +47,7 @@ def zero_filled(encoding: Encoding, kspace: NDArray[Any], mask: NDArray[np.bool_
     """
     weighted = encoding.adjoint(encoding.to_range(kspace * density_weights(mask)))
     power = np.sum(np.abs(encoding.maps) ** 2, axis=0)
-    return np.divide(weighted, power, out=np.zeros_like(weighted), where=power > 0)
+    return np.asarray(np.divide(weighted, power, out=np.zeros_like(weighted), where=power > 0))
 
 
 def tikhonov(
@@ -98,7 +98,9 @@ def tikhonov(
         objective.append(0.5 * (energy - inner(x, b + r).real))
         if callback is not None:
             callback(iteration, optimality)
-    reason = "nothing-to-solve" if scale == 0 else "optimal" if optimality < tolerance else "iteration-limit"
+    reason: StopReason = (
+        "nothing-to-solve" if scale == 0 else "optimal" if optimality < tolerance else "iteration-limit"
+    )
     return Solution(
         image=x,
         padded=x,

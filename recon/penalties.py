@@ -85,5 +85,7 @@ class TotalVariation:
 
     def cost(self, gradient: NDArray[Any]) -> float:
         """f(x) when D x is already at hand."""
-        squares = gradient[0].real ** 2 + gradient[0].imag ** 2 + gradient[1].real ** 2 + gradient[1].imag ** 2
+        squares = (
+            gradient[0].real ** 2 + gradient[0].imag ** 2 + gradient[1].real ** 2 + gradient[1].imag ** 2
+        )
         return self.strength * float(np.sum(np.sqrt(squares), dtype=np.float64))

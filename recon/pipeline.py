@@ -140,7 +140,9 @@ def reconstruct_file(
     return report
 
 
-def _run(preparation: Preparation, sink: Sink, tell: _Teller, provenance: Mapping[str, Any]) -> dict[str, Any]:
+def _run(
+    preparation: Preparation, sink: Sink, tell: _Teller, provenance: Mapping[str, Any]
+) -> dict[str, Any]:
     scan = preparation.scan
     residuals = ResidualFigures(preparation.shape, preparation.whitening, scan.axes)
     solver = SolverFigures()

@@ -101,7 +101,7 @@ def reconstruct_plane(
 
 
 def _coil_by_coil(preparation: Preparation, kspace: NDArray[Any], mask: NDArray[np.bool_]) -> PlaneResult:
-    """Root-sum-of-squares of density-compensated coil images; they reproduce their own samples, so no residual is left."""
+    """Root-sum-of-squares of density-compensated coil images: they reproduce their samples, so no residual is left."""
     images = inverse_transform(kspace * density_weights(mask))
     image = root_sum_of_squares(mix(preparation.whitening.unwhitener, images))
     nothing = np.zeros_like(image)

@@ -1,4 +1,4 @@
-"""What has to be known of a whole scan before the first plane is solved: facts, whitener, virtual coils, noise units."""
+"""What must be known of a whole scan before its first plane is solved: facts, whitener, virtual coils, noise units."""
 
 from __future__ import annotations
 
@@ -119,7 +119,9 @@ def prepare(scan: Scan, settings: Settings, report: Report) -> Preparation:
     rule = None if method == "single-coil" else resolved.coil_compression
     compression = Compression(gram, rule, has_noise_units=whitening.has_noise_units)
     if method is not None:
-        resolved = resolved.model_copy(update={"coil_maps": settings.coil_maps if method == "single-coil" else method})
+        resolved = resolved.model_copy(
+            update={"coil_maps": settings.coil_maps if method == "single-coil" else method}
+        )
     return Preparation(
         scan=scan,
         settings=resolved,
@@ -157,7 +159,9 @@ def _solved_shape(scan: Scan) -> tuple[int, int]:
     return rows, columns if is_complete else encoded
 
 
-def _read(scan: Scan, method: MapMethod | None, report: Report) -> tuple[Inspection, dict[int, list[NDArray[Any]]]]:
+def _read(
+    scan: Scan, method: MapMethod | None, report: Report
+) -> tuple[Inspection, dict[int, list[NDArray[Any]]]]:
     """The one pass over all data: facts, and each slice's calibration blocks."""
     inspector = Inspector(scan)
     blocks: dict[int, list[NDArray[Any]]] = {}
@@ -172,7 +176,9 @@ def _read(scan: Scan, method: MapMethod | None, report: Report) -> tuple[Inspect
         if done % shared in chosen:
             of_slice = blocks.setdefault(index.slice, [])
             if scan.reference_array is None:
-                of_slice.append(_block(scan, kspace, mask, must_be_full=method in ("eigenvector", "adaptive")))
+                of_slice.append(
+                    _block(scan, kspace, mask, must_be_full=method in ("eigenvector", "adaptive"))
+                )
             elif not of_slice:
                 of_slice.append(_reference_block(scan, index.slice))
     return inspector.finish(), blocks

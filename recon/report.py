@@ -77,8 +77,8 @@ class SolverFigures:
                 Finding(
                     "wavelet-too-long",
                     "warning",
-                    f"The wavelet {settings.wavelet} does not fit a plane of {rows} x {columns}, so the wavelet penalty has no "
-                    f"effect: choose a shorter one such as haar.",
+                    f"The wavelet {settings.wavelet} does not fit a plane of {rows} x {columns}, so the wavelet "
+                    f"penalty has no effect: choose a shorter one such as haar.",
                     "solver",
                 )
             )
@@ -109,8 +109,8 @@ def build_report(
             Finding(
                 "noise-free",
                 "info",
-                "The scan holds no measurable noise, so strengths are fractions of the largest zero-filled image value and "
-                "the residual has no noise to be compared with.",
+                "The scan holds no measurable noise, so strengths are fractions of the largest zero-filled image "
+                "value and the residual has no noise to be compared with.",
                 "/kspace",
             )
         )

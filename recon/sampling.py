@@ -64,7 +64,7 @@ class SamplingFacts:
 
 
 def peak_side_lobe(mask: NDArray[np.bool_]) -> float:
-    """Largest side-lobe of the point-spread function over its peak: max |F^-1 P|(r != 0) / |F^-1 P|(0) (Lustig 2007)."""
+    """Peak side-lobe of the point-spread function: max |F^-1 P|(r != 0) / |F^-1 P|(0) (Lustig et al. 2007)."""
     spread = np.abs(scipy.fft.ifft2(mask.astype(np.float64)))
     peak = float(spread[0, 0])
     spread[0, 0] = 0
@@ -98,7 +98,8 @@ def readout_finding(facts: SamplingFacts, plane_axes: tuple[str, str]) -> list[F
             Finding(
                 "partial-echo",
                 "info",
-                "The mask leaves out one end of every readout (partial echo): resolution along x is lower than the matrix says.",
+                "The mask leaves out one end of every readout (partial echo): resolution along x is lower than "
+                "the matrix says.",
                 "/mask",
             )
         ]
@@ -106,7 +107,8 @@ def readout_finding(facts: SamplingFacts, plane_axes: tuple[str, str]) -> list[F
         Finding(
             "readout-undersampled",
             "warning",
-            "The mask varies along kx, which no scanner can do: fine for a study, but do not read acquisition times from it.",
+            "The mask varies along kx, which no scanner can do: fine for a study, but do not read acquisition "
+            "times from it.",
             "/mask",
         )
     ]

@@ -180,16 +180,15 @@ def validate(scan: Scan) -> None:
     _check_kspace_axes(scan.kspace_array)
     sizes = scan.axes
     plane, image = scan.plane_axes, tuple(image_axis(axis) for axis in scan.plane_axes)
+    fixed: dict[str, int] = {axis: sizes[axis] for axis in sizes if axis in ("slice", "coil")}
     if scan.mask_array is not None:
         accepted = [axis for axis in sizes if axis != "coil"]
         _check_subset("/mask", scan.mask_array, {axis: sizes[axis] for axis in accepted})
     if scan.noise_array is not None:
         _check_noise(scan.noise_array, scan.coils)
     if scan.reference_array is not None:
-        fixed = {axis: sizes[axis] for axis in ("slice", "coil") if axis in sizes}
         _check_calibration("/reference", scan.reference_array, fixed, plane)
     if scan.sensitivity_array is not None:
-        fixed = {axis: sizes[axis] for axis in ("slice", "coil") if axis in sizes}
         _check_calibration("/sensitivity", scan.sensitivity_array, fixed, image)
         _check_map_size(scan, scan.sensitivity_array, image)
 
@@ -223,11 +222,13 @@ def _check_subset(name: str, array: LabelledArray, accepted: Mapping[str, int]) 
 
 def _check_noise(array: LabelledArray, coils: int) -> None:
     if set(array.axes) != {"coil", "sample"}:
-        raise InvalidScan(f"/noise has the axes {', '.join(array.axes)}; accepted are exactly coil and sample")
+        raise InvalidScan(
+            f"/noise has the axes {', '.join(array.axes)}; accepted are exactly coil and sample"
+        )
     sizes = array.sizes
     if sizes["coil"] != coils:
         raise InvalidScan(
-            f"/noise has {sizes['coil']} coils, /kspace has {coils}: write the noise of the same coils in the same order"
+            f"/noise has {sizes['coil']} coils, /kspace has {coils}: write the same coils in the same order"
         )
     if sizes["sample"] <= coils:
         raise InvalidScan(
@@ -236,7 +237,9 @@ def _check_noise(array: LabelledArray, coils: int) -> None:
         )
 
 
-def _check_calibration(name: str, array: LabelledArray, fixed: Mapping[str, int], plane: tuple[str, ...]) -> None:
+def _check_calibration(
+    name: str, array: LabelledArray, fixed: Mapping[str, int], plane: tuple[str, ...]
+) -> None:
     accepted = [*fixed, *plane]
     axes = array.axes
     optional = {"slice"} | ({"coil"} if fixed.get("coil", 1) == 1 else set())
@@ -246,9 +249,13 @@ def _check_calibration(name: str, array: LabelledArray, fixed: Mapping[str, int]
         raise InvalidScan(f"{name} has the axes {', '.join(axes)}; accepted are {', '.join(accepted)}")
     for label, size in array.sizes.items():
         if label in fixed and size != fixed[label]:
-            raise InvalidScan(f"{name} has length {size} along {label}, /kspace has {fixed[label]}: write the same number")
+            raise InvalidScan(
+                f"{name} has length {size} along {label}, /kspace has {fixed[label]}: write the same number"
+            )
         if size == 0:
-            raise InvalidScan(f"{name} has length 0 along {label}; write at least one sample or leave {name} out")
+            raise InvalidScan(
+                f"{name} has length 0 along {label}; write at least one sample or leave {name} out"
+            )
 
 
 def _check_map_size(scan: Scan, array: LabelledArray, image: tuple[str, ...]) -> None:

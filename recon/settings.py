@@ -29,9 +29,13 @@ def _strength(value: object) -> object:
     if value == "auto":
         return value
     if isinstance(value, bool) or not isinstance(value, int | float):
-        raise ValueError(f'expected "auto" or a number from 0 to {STRENGTH_LIMIT:g} in noise units, received {value!r}')
+        raise ValueError(
+            f'expected "auto" or a number from 0 to {STRENGTH_LIMIT:g} in noise units, received {value!r}'
+        )
     if not math.isfinite(value) or not 0 <= value <= STRENGTH_LIMIT:
-        raise ValueError(f'expected "auto" or a number from 0 to {STRENGTH_LIMIT:g} in noise units, received {value}')
+        raise ValueError(
+            f'expected "auto" or a number from 0 to {STRENGTH_LIMIT:g} in noise units, received {value}'
+        )
     return float(value)
 
 
@@ -103,7 +107,9 @@ class Settings(BaseModel):
     wavelet_strength: Strength = "auto"
     tv_strength: Strength = "auto"
     tikhonov_strength: Strength = "auto"
-    wavelet: Annotated[str, BeforeValidator(_wavelet), Field(json_schema_extra={"enum": list(WAVELETS)})] = "db4"
+    wavelet: Annotated[str, BeforeValidator(_wavelet), Field(json_schema_extra={"enum": list(WAVELETS)})] = (
+        "db4"
+    )
     coil_maps: Literal["auto", "eigenvector", "adaptive", "supplied"] = "auto"
     coil_compression: Annotated[
         Literal["auto"] | KeepEnergy | KeepCoils | None, BeforeValidator(_compression)

@@ -132,7 +132,8 @@ class _Iteration:
     def __init__(self, problem: Problem, start: Solution | None) -> None:
         encoding = problem.encoding
         self.encoding = encoding
-        self.shape = encoding.domain_shape
+        rows, columns = encoding.domain_shape
+        self.shape = (rows, columns)
         transform = Wavelet(self.shape, problem.wavelet)
         has_wavelet = problem.wavelet_strength > 0 and transform.levels > 0
         self.wavelet = WaveletL1(transform, problem.wavelet_strength) if has_wavelet else None

@@ -28,7 +28,9 @@ def low_resolution_images(block: NDArray[Any]) -> NDArray[Any]:
     window = np.outer(np.hanning(rows + 2)[1:-1], np.hanning(columns + 2)[1:-1])
     padded = np.zeros((block.shape[0], GRID_FACTOR * rows, GRID_FACTOR * columns), np.complex64)
     crop = crop_block(padded, rows, columns)
-    first = tuple(large // 2 - small // 2 for large, small in zip(padded.shape[1:], crop.shape[1:], strict=True))
+    first = tuple(
+        large // 2 - small // 2 for large, small in zip(padded.shape[1:], crop.shape[1:], strict=True)
+    )
     padded[:, first[0] : first[0] + rows, first[1] : first[1] + columns] = block * window
     return inverse_transform(padded)
 
@@ -64,4 +66,4 @@ def adaptive_maps(
 
 
 def _outer(images: NDArray[Any]) -> NDArray[Any]:
-    return np.einsum("crs,drs->cdrs", images, images.conj())
+    return np.asarray(np.einsum("crs,drs->cdrs", images, images.conj()))

@@ -29,11 +29,11 @@ def central_block(mask: NDArray[np.bool_]) -> tuple[int, int]:
     -------
     (rows, columns), both 0 where DC itself is not sampled.
     """
-    rows, columns = mask.shape
+    rows = mask.shape[0]
     best = (0, 0)
     for height in range(1, rows + 1):
         start = rows // 2 - height // 2
-        width = _centred_run(mask[start : start + height].all(axis=0))
+        width = _centred_run(np.asarray(mask[start : start + height].all(axis=0)))
         if width == 0:
             break
         # the shorter side limits the maps' resolution, so it counts twice

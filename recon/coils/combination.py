@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 
 
 def sensitivity_weighted(images: NDArray[Any], maps: NDArray[Any]) -> NDArray[Any]:
-    """Optimal combination of whitened coil images: S^H m_c / (S^H S), zero where the maps are (Roemer et al. 1990, eq. 30).
+    """Optimal combination of whitened coil images, S^H m_c / (S^H S), zero where S is (Roemer et al. 1990, eq. 30).
 
     Parameters
     ----------
@@ -22,9 +22,9 @@ def sensitivity_weighted(images: NDArray[Any], maps: NDArray[Any]) -> NDArray[An
     """
     weight = np.sum(np.abs(maps) ** 2, axis=0)
     combined = np.sum(maps.conj() * images, axis=0)
-    return np.divide(combined, weight, out=np.zeros_like(combined), where=weight > 0)
+    return np.asarray(np.divide(combined, weight, out=np.zeros_like(combined), where=weight > 0))
 
 
 def root_sum_of_squares(images: NDArray[Any]) -> NDArray[Any]:
     """sqrt(sum_c |m_c|^2), real-valued magnitude in the images' complex dtype (Roemer et al. 1990)."""
-    return np.sqrt(np.sum(np.abs(images) ** 2, axis=0)).astype(images.dtype)
+    return np.asarray(np.sqrt(np.sum(np.abs(images) ** 2, axis=0)), images.dtype)

@@ -78,7 +78,9 @@ class Compression:
         return mix(self.matrix.conj().T, virtual)
 
 
-def _count(values: NDArray[Any], rule: Literal["auto"] | KeepEnergy | KeepCoils | None, has_noise: bool) -> int:
+def _count(
+    values: NDArray[Any], rule: Literal["auto"] | KeepEnergy | KeepCoils | None, has_noise: bool
+) -> int:
     if rule is None:
         return len(values)
     if isinstance(rule, KeepCoils):

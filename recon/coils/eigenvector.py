@@ -74,10 +74,12 @@ def normalised(maps: NDArray[Any], inside: NDArray[np.bool_]) -> NDArray[np.comp
     """Scale maps to sum_c |S_c|^2 = 1 inside, zero outside."""
     size = np.sqrt(np.sum(np.abs(maps) ** 2, axis=0))
     scale = np.divide(inside, size, out=np.zeros_like(size), where=size > 0)
-    return (maps * scale).astype(np.complex64)
+    return np.asarray(maps * scale, np.complex64)
 
 
-def _signal_subspace(blocks: list[NDArray[Any]], kernel: tuple[int, ...], has_noise_units: bool) -> NDArray[Any]:
+def _signal_subspace(
+    blocks: list[NDArray[Any]], kernel: tuple[int, ...], has_noise_units: bool
+) -> NDArray[Any]:
     """Orthonormal basis (coil * k * k, rank) of the patches' signal."""
     size = blocks[0].shape[0] * kernel[0] * kernel[1]
     gram = np.zeros((size, size), np.complex128)
@@ -130,5 +132,7 @@ def interpolate(coarse: NDArray[Any], shape: tuple[int, int]) -> NDArray[Any]:
         at = (np.arange(n) - n // 2) * (m / n) + m // 2
         low = np.floor(at).astype(int)
         weight = (at - low).reshape((-1, 1) if axis == -2 else (-1,))
-        out = np.take(out, low % m, axis=axis) * (1 - weight) + np.take(out, (low + 1) % m, axis=axis) * weight
+        out = (
+            np.take(out, low % m, axis=axis) * (1 - weight) + np.take(out, (low + 1) % m, axis=axis) * weight
+        )
     return out

@@ -44,7 +44,7 @@ class CoilMaps:
     @property
     def support(self) -> NDArray[np.bool_]:
         """Where any map is not zero."""
-        return np.any(self.virtual != 0, axis=0)
+        return np.asarray(np.any(self.virtual != 0, axis=0))
 
 
 class MapMaker:
@@ -61,7 +61,12 @@ class MapMaker:
     """
 
     def __init__(
-        self, scan: Scan, method: MapMethod, whitening: Whitening, compression: Compression, shape: tuple[int, int]
+        self,
+        scan: Scan,
+        method: MapMethod,
+        whitening: Whitening,
+        compression: Compression,
+        shape: tuple[int, int],
     ) -> None:
         self.scan = scan
         self.method = method
@@ -93,23 +98,27 @@ class MapMaker:
             )
         whitened = self.compression.expand(virtual)
         scale = _inverse_size(mix(self.whitening.unwhitener, whitened))
-        return CoilMaps(virtual * scale, whitened * scale)
+        return CoilMaps(np.asarray(virtual * scale, np.complex64), np.asarray(whitened * scale, np.complex64))
 
     def _supplied(self, position: int) -> CoilMaps:
         physical = self.scan.sensitivity(position)
         if physical is None:
-            raise InvalidScan("coil_maps is supplied, but the scan has no /sensitivity: write maps or choose another")
+            raise InvalidScan(
+                "coil_maps is supplied, but the scan has no /sensitivity: write maps or choose another"
+            )
         if not np.isfinite(physical).all():
             raise InvalidScan("/sensitivity contains NaN or Inf; write finite numbers")
         if physical.shape[-1] > self.shape[1]:
             physical = crop_centre(physical, self.shape[1])
         elif physical.shape[-1] < self.shape[1]:
             raise InvalidScan(
-                "/sensitivity has readout oversampling removed, but the mask varies along kx, so that the plane is solved "
-                "with it: supply maps of the whole encoded field of view"
+                "/sensitivity has readout oversampling removed, but the mask varies along kx, so that the plane is "
+                "solved with it: supply maps of the whole encoded field of view"
             )
         if not physical.any():
-            raise InvalidScan(f"/sensitivity of slice {position} is zero everywhere; write the maps or leave them out")
+            raise InvalidScan(
+                f"/sensitivity of slice {position} is zero everywhere; write the maps or leave them out"
+            )
         whitened = self.whitening.apply(physical * _inverse_size(physical))
         return CoilMaps(self.compression.apply(whitened), whitened)
 
@@ -131,8 +140,8 @@ def squared_gain(block: NDArray[Any], whitening: Whitening, compression: Compres
         Whitened calibration k-space.
     """
     images = low_resolution_images(block)
-    virtual = np.sum(np.abs(compression.apply(images)) ** 2, axis=0, dtype=np.float64)
-    physical = np.sum(np.abs(mix(whitening.unwhitener, images)) ** 2, axis=0, dtype=np.float64)
+    virtual = np.asarray(np.sum(np.abs(compression.apply(images)) ** 2, axis=0, dtype=np.float64))
+    physical = np.asarray(np.sum(np.abs(mix(whitening.unwhitener, images)) ** 2, axis=0, dtype=np.float64))
     inside = virtual > OBJECT_LEVEL**2 * virtual.max()
     if virtual.max() == 0:
         return 0.0, 0.0

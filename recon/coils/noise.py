@@ -65,7 +65,8 @@ class Whitening:
 def mix(matrix: NDArray[Any], channels: NDArray[Any]) -> NDArray[Any]:
     """Apply a matrix (out, coil) along the first axis of `channels`, keeping its precision."""
     flat = channels.reshape(channels.shape[0], -1)
-    return (matrix.astype(channels.dtype) @ flat).reshape(matrix.shape[0], *channels.shape[1:])
+    mixed: NDArray[Any] = matrix.astype(channels.dtype) @ flat
+    return mixed.reshape(matrix.shape[0], *channels.shape[1:])
 
 
 def sample_covariance(samples: NDArray[Any]) -> NDArray[Any]:

@@ -39,7 +39,11 @@ def _number(low: float, high: float, *, low_open: bool = False) -> Callable[[Any
 def _numbers(count: int | None, *, positive: bool) -> Callable[[Any], Value | None]:
     def read(value: Any) -> Value | None:
         array = np.asarray(value)
-        if array.dtype.kind not in "fiu" or (count is not None and array.size % count != 0) or array.size == 0:
+        if (
+            array.dtype.kind not in "fiu"
+            or (count is not None and array.size % count != 0)
+            or array.size == 0
+        ):
             return None
         numbers = array.reshape(-1).astype(np.float64)
         if not np.isfinite(numbers).all() or (positive and (numbers <= 0).any()):
@@ -136,21 +140,25 @@ def read_attributes(
     try:
         names = list(found.attrs)
     except (OSError, RuntimeError):
-        raise InvalidScan(f"{where}: its attributes cannot be read; the file is damaged, write it again") from None
+        raise InvalidScan(
+            f"{where}: its attributes cannot be read; the file is damaged, write it again"
+        ) from None
     for name in names:
         if name in rules:
             try:
                 raw = found.attrs[name]
             except (OSError, RuntimeError, TypeError, ValueError):
-                raise InvalidScan(f"{where}: attribute {name} cannot be read; write it as a plain value") from None
+                raise InvalidScan(
+                    f"{where}: attribute {name} cannot be read; write it as a plain value"
+                ) from None
             values[name] = check_value(where, name, raw, rules)
         elif name not in _STRUCTURAL and name not in NEUTRAL_ONLY:
             findings.append(
                 Finding(
                     "attribute-ignored",
                     "info",
-                    f"{where} carries the attribute {_shown(name)}, which the scan layout does not know: it has no effect; "
-                    f"correct the name if it is a slip (known are {', '.join(rules)}).",
+                    f"{where} carries the attribute {_shown(name)}, which the scan layout does not know: it has no "
+                    f"effect; correct the name if it is a slip (known are {', '.join(rules)}).",
                     where,
                 )
             )

@@ -34,7 +34,9 @@ def open_file(path: Path | str) -> h5py.File:
         return h5py.File(path, "r")
     except (OSError, RuntimeError) as error:
         kind = "truncated HDF5" if "truncated" in str(error) else "not HDF5 or damaged"
-        raise InvalidScan(f"the file cannot be opened: {kind}; write it again and check that it is complete") from None
+        raise InvalidScan(
+            f"the file cannot be opened: {kind}; write it again and check that it is complete"
+        ) from None
 
 
 def dataset(file: h5py.File, name: str) -> h5py.Dataset | None:
@@ -50,13 +52,17 @@ def dataset(file: h5py.File, name: str) -> h5py.Dataset | None:
         if link is None:
             return None
         if not isinstance(link, h5py.HardLink):
-            raise InvalidScan(f"/{name} is a {type(link).__name__}; accepted are datasets stored in the file itself")
+            raise InvalidScan(
+                f"/{name} is a {type(link).__name__}; accepted are datasets stored in the file itself"
+            )
         found = file[name]
         if not isinstance(found, h5py.Dataset):
             raise InvalidScan(f"/{name} is a {type(found).__name__.lower()}; accepted is a dataset")
         _refuse_foreign_storage(name, found)
     except (OSError, RuntimeError, KeyError) as error:
-        raise InvalidScan(f"/{name} cannot be read: the file is damaged ({type(error).__name__}); write it again") from None
+        raise InvalidScan(
+            f"/{name} cannot be read: the file is damaged ({type(error).__name__}); write it again"
+        ) from None
     return found
 
 
@@ -65,12 +71,16 @@ def _refuse_foreign_storage(name: str, found: h5py.Dataset) -> None:
         raise InvalidScan(f"/{name} is a virtual dataset; accepted are datasets stored in the file itself")
     properties = found.id.get_create_plist()
     if properties.get_external_count() > 0:
-        raise InvalidScan(f"/{name} is stored in another file; accepted are datasets stored in the file itself")
+        raise InvalidScan(
+            f"/{name} is stored in another file; accepted are datasets stored in the file itself"
+        )
     for position in range(properties.get_nfilters()):
         code = properties.get_filter(position)[0]
         if code not in ACCEPTED_FILTERS:
             accepted = ", ".join(ACCEPTED_FILTERS.values())
-            raise InvalidScan(f"/{name} uses HDF5 filter {code}; accepted are {accepted}: write it with one of these")
+            raise InvalidScan(
+                f"/{name} uses HDF5 filter {code}; accepted are {accepted}: write it with one of these"
+            )
     if found.shape is None:
         raise InvalidScan(f"/{name} is an empty dataspace; write an array")
     declared = int(np.prod([int(n) for n in found.shape], dtype=object)) * found.dtype.itemsize
@@ -111,14 +121,18 @@ def labels(name: str, found: h5py.Dataset, accepted: tuple[str, ...]) -> tuple[s
         if attribute in found.attrs:
             value = text(_attribute(name, found, attribute))
             if value is None:
-                raise InvalidScan(f'/{name}: the attribute {attribute} is not text; write it like "coil,ky,kx"')
+                raise InvalidScan(
+                    f'/{name}: the attribute {attribute} is not text; write it like "coil,ky,kx"'
+                )
             sources[attribute] = tuple(part.strip() for part in value.split(","))[::step]
-    hint = f'label the axes, for instance axes="{",".join(accepted[-3:])}" in C order or axes_fastest_first in column-major order'
+    hint = f'label them, for instance axes="{",".join(accepted[-3:])}" in C order, or axes_fastest_first'
     if not sources:
         raise InvalidScan(f"/{name} has unlabelled axes; {hint}")
     if len(set(sources.values())) > 1:
         said = "; ".join(f"{source} says {','.join(value)}" for source, value in sources.items())
-        raise InvalidScan(f"/{name}: the axis labels disagree ({said}, all in C order); keep one or make them agree")
+        raise InvalidScan(
+            f"/{name}: the axis labels disagree ({said}, all in C order); keep one or make them agree"
+        )
     found_labels = next(iter(sources.values()))
     _check_labels(name, found, found_labels, accepted)
     return found_labels
@@ -128,7 +142,9 @@ def _attribute(name: str, found: h5py.Dataset, attribute: str) -> Any:
     try:
         return found.attrs[attribute]
     except (OSError, RuntimeError, TypeError, ValueError):
-        raise InvalidScan(f"/{name}: the attribute {attribute} cannot be read; write it as a plain value") from None
+        raise InvalidScan(
+            f"/{name}: the attribute {attribute} cannot be read; write it as a plain value"
+        ) from None
 
 
 def _dimension_labels(found: h5py.Dataset) -> list[str]:
@@ -141,7 +157,7 @@ def _dimension_labels(found: h5py.Dataset) -> list[str]:
 def _check_labels(name: str, found: h5py.Dataset, given: tuple[str, ...], accepted: tuple[str, ...]) -> None:
     if len(given) != len(found.shape):
         raise InvalidScan(
-            f"/{name} has {len(found.shape)} dimensions but {len(given)} axis labels ({','.join(given)}); label each axis"
+            f"/{name} has {len(found.shape)} dimensions but {len(given)} axis labels ({','.join(given)}); label each"
         )
     for label in given:
         if label not in accepted and label != COMPLEX_AXIS:
@@ -178,10 +194,14 @@ def _check_encoding(name: str, found: h5py.Dataset, given: tuple[str, ...]) -> N
     if COMPLEX_AXIS in given:
         length = found.shape[given.index(COMPLEX_AXIS)]
         if dtype.kind != "f" or length != 2:
-            raise InvalidScan(f"/{name} has a complex axis of length {length} and type {dtype}; accepted are {kinds}")
+            raise InvalidScan(
+                f"/{name} has a complex axis of length {length} and type {dtype}; accepted are {kinds}"
+            )
     elif not (dtype.kind == "c" or is_pair):
         raise InvalidScan(f"/{name} holds {dtype} numbers; accepted are {kinds}: convert before writing")
-    widths = {dtype[p].itemsize for p in parts} if is_pair else {dtype.itemsize // (2 if dtype.kind == "c" else 1)}
+    widths = (
+        {dtype[p].itemsize for p in parts} if is_pair else {dtype.itemsize // (2 if dtype.kind == "c" else 1)}
+    )
     if not widths <= {4, 8}:
         raise InvalidScan(f"/{name} holds {dtype} numbers; accepted are {kinds}: convert before writing")
 

@@ -134,7 +134,9 @@ def read_image(path: Path | str) -> ImageFile:
     """
     with hdf5.open_file(path) as file:
         if hdf5.text(file.attrs.get("layout")) != LAYOUT or "report" not in file.attrs:
-            raise InvalidScan(f"{Path(path).name} is not a complete {LAYOUT} file; reconstruct the scan again")
+            raise InvalidScan(
+                f"{Path(path).name} is not a complete {LAYOUT} file; reconstruct the scan again"
+            )
         image = file["image"]
         return ImageFile(
             image=image[()],

@@ -217,7 +217,9 @@ def _write_array(
 ) -> None:
     values = np.asarray(array)
     if labels is None or len(labels) != values.ndim:
-        raise InvalidScan(f"/{name} has {values.ndim} dimensions and the labels {labels}; give one label for each")
+        raise InvalidScan(
+            f"/{name} has {values.ndim} dimensions and the labels {labels}; give one label for each"
+        )
     options = {"compression": compression, "shuffle": True} if compression else {}
     written = file.create_dataset(name, data=values, **options)
     for position, label in enumerate(labels):

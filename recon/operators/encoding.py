@@ -22,7 +22,7 @@ from recon.operators.fourier import inverse_transform, transform
 
 
 def transform_axes(mask: NDArray[np.bool_]) -> tuple[int, ...]:
-    """Axes along which the transform has to stay in the iteration: rows alone when the mask is constant along columns."""
+    """Axes whose transform has to stay in the iteration: rows alone when the mask is constant along columns."""
     is_constant = bool((mask == mask[:, :1]).all())
     return (-2,) if is_constant else (-2, -1)
 
@@ -51,7 +51,9 @@ class Encoding(LinearOperator):
         self._mask = mask[:, :1] if self.axes == (-2,) else mask
         # A shift of the image multiplies k-space by a phase, which the mask leaves alone: so the normal operator
         # needs no shifts of the image, only the mask in the order of the plain FFT.
-        self._plain_mask = np.ascontiguousarray(np.fft.ifftshift(self._mask, axes=self.axes)).astype(maps.real.dtype)
+        self._plain_mask = np.ascontiguousarray(np.fft.ifftshift(self._mask, axes=self.axes)).astype(
+            maps.real.dtype
+        )
         self._conjugate_maps = maps.conj()
         outside = ~np.any(maps != 0, axis=0)
         self._outside = outside.astype(maps.real.dtype) if outside.any() else None
@@ -73,7 +75,7 @@ class Encoding(LinearOperator):
         """Sampled data to image."""
         images = inverse_transform(y * self._mask, self.axes)
         images *= self._conjugate_maps
-        return images.sum(axis=0, dtype=images.dtype)
+        return np.asarray(images.sum(axis=0, dtype=images.dtype))
 
     def normal(self, x: NDArray[Any]) -> NDArray[Any]:
         """E^H E x plus x outside the object, coil by coil so that each coil's plane stays in the cache."""
@@ -89,6 +91,6 @@ class Encoding(LinearOperator):
         return out
 
     def squared_norm_bound(self) -> float:
-        """Upper bound of ||E||^2, the outside included: max over pixels of sum_c |S_c|^2, since P and F have norm one."""
+        """Upper bound of ||E||^2, the outside included: max over pixels of sum_c |S_c|^2 (P and F have norm one)."""
         largest = float(np.max(np.sum(np.abs(self.maps) ** 2, axis=0, dtype=np.float64)))
         return largest if self._outside is None else max(largest, 1.0)

@@ -64,7 +64,11 @@ class Wavelet(LinearOperator):
             half = rows // 2
             low, high = (
                 pywt.idwt(
-                    block[at, : columns // 2], block[at, columns // 2 :], self._wavelet, "periodization", axis=1
+                    block[at, : columns // 2],
+                    block[at, columns // 2 :],
+                    self._wavelet,
+                    "periodization",
+                    axis=1,
                 )
                 for at in (slice(0, half), slice(half, rows))
             )
