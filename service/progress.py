@@ -1,4 +1,4 @@
-"""Progress on standard error: one line that is redrawn on a terminal, one plain line for each stage elsewhere."""
+"""Progress on standard error: one line that is redrawn on a terminal; elsewhere a line per stage and tenth done."""
 
 from __future__ import annotations
 
@@ -9,6 +9,7 @@ from typing import Self, TextIO
 
 _BAR_WIDTH = 24
 _REDRAW_SECONDS = 0.1
+_PLAIN_STEP = 0.1
 
 
 class ProgressLine:
@@ -27,6 +28,8 @@ class ProgressLine:
         self._drawn_at = 0.0
         self._drawn = 0
         self._stage: str | None = None
+        self._told = -_PLAIN_STEP
+        self._told_stages: set[str] = set()
 
     def update(self, stage: str, fraction: float, seconds_left: float | None = None) -> None:
         """Show that `fraction` (0 to 1) of the whole work is done and `stage` is under way."""
@@ -38,7 +41,9 @@ class ProgressLine:
                 return
             self._draw(self._line(stage, fraction, seconds_left, now))
             self._drawn_at = now
-        elif is_new_stage:
+        elif stage not in self._told_stages or fraction >= self._told + _PLAIN_STEP:
+            self._told = fraction
+            self._told_stages.add(stage)
             self._stream.write(f"{100 * fraction:3.0f} %  {stage}\n")
             self._stream.flush()
         self._stage = stage

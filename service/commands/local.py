@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import argparse
-import json
 from collections.abc import Mapping
 from functools import partial
 from pathlib import Path
@@ -90,18 +89,15 @@ def run_inspect(arguments: argparse.Namespace) -> int:
 
 def summary(report: Mapping[str, Any]) -> dict[str, Any]:
     """The figures of a report that people look at first."""
-    chi = report["consistency"]["reduced_chi_squared"]["value"]
-    sampling = report["sampling"]
+    chi_squared = report["consistency"]["reduced_chi_squared"]
+    solver = report["solver"]
+    planes = len(solver["planes"])
     return {
         "method": report["settings"]["method"],
-        "acceleration": _shown(sampling.get("net_acceleration")),
-        "reduced chi-squared": _shown(chi),
-        "verdict": _verdict(report["verdict"]),
+        "net acceleration": _shown(report["sampling"]["net_acceleration"]),
+        "reduced chi-squared": _shown(chi_squared["value"]) if chi_squared else None,
+        "solver": f"{solver['converged_planes']} of {planes} planes converged" if planes else None,
     }
-
-
-def _verdict(verdict: Any) -> str:
-    return str(verdict) if isinstance(verdict, str) else json.dumps(verdict, ensure_ascii=False)
 
 
 def _shown(value: Any) -> str | None:

@@ -1,4 +1,4 @@
-"""Progress lines: redrawn on a terminal, one plain line for each stage elsewhere."""
+"""Progress lines: redrawn on a terminal, a line per stage and tenth elsewhere."""
 
 from __future__ import annotations
 
@@ -14,12 +14,14 @@ class Terminal(io.StringIO):
         return True
 
 
-def test_plain_stream_gets_one_line_for_each_stage() -> None:
+def test_plain_stream_gets_a_line_for_each_new_stage_and_tenth() -> None:
     stream = io.StringIO()
     with ProgressLine(stream) as line:
         for number in range(101):
             line.update("solve" if number >= 20 else "read", number / 100)
-    assert stream.getvalue() == "  0 %  read\n 20 %  solve\n"
+    lines = stream.getvalue().splitlines()
+    assert lines[:4] == ["  0 %  read", " 10 %  read", " 20 %  solve", " 30 %  solve"]
+    assert len(lines) == 11
 
 
 def test_terminal_gets_one_line_that_is_redrawn_and_ended() -> None:
