@@ -9,7 +9,6 @@ from typing import Self, TextIO
 
 _BAR_WIDTH = 24
 _REDRAW_SECONDS = 0.1
-_PLAIN_STEP = 0.1
 
 
 class ProgressLine:
@@ -28,7 +27,7 @@ class ProgressLine:
         self._drawn_at = 0.0
         self._drawn = 0
         self._stage: str | None = None
-        self._told = -_PLAIN_STEP
+        self._told_tenth = -1
         self._told_stages: set[str] = set()
 
     def update(self, stage: str, fraction: float, seconds_left: float | None = None) -> None:
@@ -41,8 +40,8 @@ class ProgressLine:
                 return
             self._draw(self._line(stage, fraction, seconds_left, now))
             self._drawn_at = now
-        elif stage not in self._told_stages or fraction >= self._told + _PLAIN_STEP:
-            self._told = fraction
+        elif stage not in self._told_stages or int(10 * fraction + 1e-9) > self._told_tenth:
+            self._told_tenth = int(10 * fraction + 1e-9)
             self._told_stages.add(stage)
             self._stream.write(f"{100 * fraction:3.0f} %  {stage}\n")
             self._stream.flush()
