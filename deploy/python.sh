@@ -41,7 +41,7 @@ make_environment() { # FOLDER LOCK [LOCK-WITHOUT-DEPENDENCIES]: made anew when P
     echo "Making an environment with $("$python" --version) in $folder ..." >&2
     rm -rf "$folder"
     "$python" -m venv "$folder"
-    local pip=("$folder/bin/python" -m pip install --quiet --no-compile)
+    local pip=("$folder/bin/python" -m pip install -qq --no-compile)
     # Wheels only: a fresh machine has no compiler.
     "${pip[@]}" --require-hashes --only-binary :all: --requirement "$1"
     if [ $# -gt 1 ]; then
