@@ -7,6 +7,8 @@ import logging
 import os
 import signal
 import time
+from collections.abc import Iterator
+from contextlib import contextmanager
 from types import FrameType
 from typing import Final
 
@@ -98,8 +100,20 @@ class _Server(uvicorn.Server):
         super().__init__(config)
         self._app = app
 
+    @contextmanager
+    def capture_signals(self) -> Iterator[None]:
+        """Take signals while serving; the parent class would raise them again before workers and files are closed."""
+        loop = asyncio.get_running_loop()
+        for number in (signal.SIGINT, signal.SIGTERM):
+            loop.add_signal_handler(number, self.handle_exit, number, None)
+        try:
+            yield
+        finally:
+            for number in (signal.SIGINT, signal.SIGTERM):
+                loop.remove_signal_handler(number)
+
     def handle_exit(self, sig: int, frame: FrameType | None) -> None:
-        """Take the signal."""
+        """Stop serving; asked twice, without waiting for open answers."""
         self._app.state.services.watch.close()
         super().handle_exit(sig, frame)
 

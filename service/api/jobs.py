@@ -110,7 +110,7 @@ def _write_row(
                 "pace": order.settings.method,
             },
         )
-        body = JobOut.of(job, (None, None)).model_dump(mode="json")
+        body = JobOut.of(job, parts.estimates.of(job)).model_dump(mode="json")
         headers = {"Location": f"/v1/jobs/{job.id}", "Retry-After": "1"}
         answer = {"status": 202, "headers": headers, "body": body}
         if key is not None:

@@ -70,7 +70,7 @@ class Estimates:
 
     def _expected(self, pace: str, work: int) -> float | None:
         with self._lock:
-            if time.monotonic() - self._read_at > _REFRESH_SECONDS:
+            if pace not in self._paces or time.monotonic() - self._read_at > _REFRESH_SECONDS:
                 self._paces = self._read_paces()
                 self._read_at = time.monotonic()
         seconds = self._paces.get(pace)

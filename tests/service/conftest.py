@@ -33,8 +33,20 @@ MakeScan = Callable[..., bytes]
 @pytest.fixture
 def settings(tmp_path: Path) -> ServiceSettings:
     """Settings with short intervals and small limits."""
-    base = ServiceSettings.from_environment(data=tmp_path / "data", environment={})
+    return _settings(tmp_path / "data")
+
+
+def _settings(data: Path) -> ServiceSettings:
+    base = ServiceSettings.from_environment(data=data, environment={})
     return replace(base, upload_limit=UPLOAD_LIMIT, sweep_seconds=0.2, stall_seconds=5.0)
+
+
+def send(client: Caller, content: bytes) -> dict[str, Any]:
+    """Send a scan that is accepted."""
+    answer = client.post("/v1/scans", content=content, headers={"Content-Type": MEDIA_TYPE})
+    assert answer.status_code == 201, answer.text
+    document: dict[str, Any] = answer.json()
+    return document
 
 
 class Caller(httpx.Client):
@@ -79,6 +91,19 @@ def client(settings: ServiceSettings) -> Iterator[Caller]:
         yield caller
 
 
+@pytest.fixture(scope="module")
+def shared(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Caller]:
+    """One application for all tests of a module that leave nothing behind."""
+    with running(_settings(tmp_path_factory.mktemp("shared") / "data")) as caller:
+        yield caller
+
+
+@pytest.fixture(scope="module")
+def shared_scan(shared: Caller, tmp_path_factory: pytest.TempPathFactory) -> dict[str, Any]:
+    """A scan of the shared application."""
+    return send(shared, scan_content(tmp_path_factory.mktemp("scan") / "scan.h5"))
+
+
 @pytest.fixture
 def parts(client: Caller) -> Services:
     """What is behind the routes."""
@@ -95,15 +120,18 @@ def make_scan(tmp_path: Path) -> MakeScan:
     return make
 
 
-def scan_content(path: Path, *, seed: int = 0, shape: tuple[int, int, int] = (4, 32, 32), **extra: Any) -> bytes:
+def scan_content(
+    path: Path, *, seed: int = 0, shape: tuple[int, int, int] = (4, 32, 32), **extra: Any
+) -> bytes:
     """Write a scan of a disc seen by coils around it, half of its lines measured."""
     coils, rows, columns = shape
     noise = np.random.default_rng(seed)
     y, x = np.mgrid[-1 : 1 : rows * 1j, -1 : 1 : columns * 1j]
     angles = 2 * np.pi * np.arange(coils) / coils
-    maps = np.exp(
-        -((y - np.sin(angles)[:, None, None]) ** 2 + (x - np.cos(angles)[:, None, None]) ** 2)
-    ) * np.exp(1j * angles)[:, None, None]
+    maps = (
+        np.exp(-((y - np.sin(angles)[:, None, None]) ** 2 + (x - np.cos(angles)[:, None, None]) ** 2))
+        * np.exp(1j * angles)[:, None, None]
+    )
     image = 20.0 * maps * (x**2 + y**2 < 0.5)
     kspace = np.fft.fftshift(np.fft.fft2(np.fft.ifftshift(image, axes=(-2, -1)), norm="ortho"), axes=(-2, -1))
     kspace = kspace + 0.5 * (noise.normal(size=shape) + 1j * noise.normal(size=shape))
@@ -118,10 +146,7 @@ def scan_content(path: Path, *, seed: int = 0, shape: tuple[int, int, int] = (4,
 @pytest.fixture
 def scan(client: Caller, make_scan: MakeScan) -> dict[str, Any]:
     """An accepted scan."""
-    answer = client.post("/v1/scans", content=make_scan(), headers={"Content-Type": MEDIA_TYPE})
-    assert answer.status_code == 201, answer.text
-    document: dict[str, Any] = answer.json()
-    return document
+    return send(client, make_scan())
 
 
 @pytest.fixture

@@ -43,7 +43,9 @@ def test_scan_is_accepted_with_its_facts(client: Caller, make_scan: MakeScan) ->
     assert client.get(answer.headers["location"]).json() == scan
 
 
-def test_same_content_is_the_same_scan(client: Caller, make_scan: MakeScan, settings: ServiceSettings) -> None:
+def test_same_content_is_the_same_scan(
+    client: Caller, make_scan: MakeScan, settings: ServiceSettings
+) -> None:
     content = make_scan()
     first = client.post("/v1/scans", content=content, headers=HEADERS)
     again = client.post("/v1/scans", params={"label": "other"}, content=content, headers=HEADERS)
@@ -82,18 +84,22 @@ def test_scan_with_an_unfinished_job_stays(
 def test_digest_is_checked(client: Caller, make_scan: MakeScan, settings: ServiceSettings) -> None:
     content = make_scan()
     wrong = base64.b64encode(hashlib.sha256(b"other").digest()).decode()
-    answer = client.post("/v1/scans", content=content, headers={**HEADERS, "Repr-Digest": f"sha-256=:{wrong}:"})
+    answer = client.post(
+        "/v1/scans", content=content, headers={**HEADERS, "Repr-Digest": f"sha-256=:{wrong}:"}
+    )
     assert answer.status_code == 400
     assert "Repr-Digest" in answer.json()["detail"]
     assert _left_behind(settings) == []
     right = base64.b64encode(hashlib.sha512(content).digest()).decode()
-    answer = client.post("/v1/scans", content=content, headers={**HEADERS, "Repr-Digest": f"sha-512=:{right}:"})
+    answer = client.post(
+        "/v1/scans", content=content, headers={**HEADERS, "Repr-Digest": f"sha-512=:{right}:"}
+    )
     assert answer.status_code == 201
 
 
 @pytest.mark.parametrize("digest", ["md5=:AAAA:", "sha-256=:AAAA:", "sha-256=AAAA", "nonsense", ""])
-def test_digest_that_cannot_be_checked_is_refused(client: Caller, make_scan: MakeScan, digest: str) -> None:
-    answer = client.post("/v1/scans", content=make_scan(), headers={**HEADERS, "Repr-Digest": digest})
+def test_digest_that_cannot_be_checked_is_refused(shared: Caller, make_scan: MakeScan, digest: str) -> None:
+    answer = shared.post("/v1/scans", content=make_scan(), headers={**HEADERS, "Repr-Digest": digest})
     assert answer.status_code == 400
     assert "Repr-Digest" in answer.json()["detail"]
 
@@ -110,28 +116,27 @@ def test_digest_that_cannot_be_checked_is_refused(client: Caller, make_scan: Mak
     ids=["empty", "wrong type", "no type", "too large", "not HDF5"],
 )
 def test_body_that_is_no_scan_is_refused(
-    client: Caller,
-    settings: ServiceSettings,
+    shared: Caller,
     content: bytes,
     headers: dict[str, str],
     status: int,
     words: str,
 ) -> None:
-    answer = client.post("/v1/scans", content=content, headers=headers)
+    answer = shared.post("/v1/scans", content=content, headers=headers)
     problem = answer.json()
     assert answer.status_code == status == problem["status"]
     assert answer.headers["content-type"] == "application/problem+json"
     assert problem["type"].startswith("urn:fallow:problem:")
     assert words in problem["detail"]
-    assert _left_behind(settings) == []
+    assert _left_behind(shared.parts.settings) == []
 
 
-def test_streamed_body_is_counted(client: Caller, settings: ServiceSettings) -> None:
+def test_streamed_body_is_counted(shared: Caller) -> None:
     pieces = (b"x" * 65536 for _ in range(UPLOAD_LIMIT // 65536 + 1))
-    answer = client.post("/v1/scans", content=pieces, headers=HEADERS)
+    answer = shared.post("/v1/scans", content=pieces, headers=HEADERS)
     assert answer.status_code == 413
-    assert _left_behind(settings) == []
-    assert client.post("/v1/scans", content=iter(()), headers=HEADERS).status_code == 400
+    assert _left_behind(shared.parts.settings) == []
+    assert shared.post("/v1/scans", content=iter(()), headers=HEADERS).status_code == 400
 
 
 def _write(path: Path, **changes: Any) -> None:
@@ -172,50 +177,50 @@ REFUSED: dict[str, tuple[dict[str, Any], str]] = {
 
 @pytest.mark.parametrize(("changes", "words"), REFUSED.values(), ids=REFUSED)
 def test_scan_that_cannot_be_used_is_refused(
-    client: Caller, settings: ServiceSettings, tmp_path: Path, changes: dict[str, Any], words: str
+    shared: Caller, tmp_path: Path, changes: dict[str, Any], words: str
 ) -> None:
     path = tmp_path / "wrong.h5"
     _write(path, **changes)
-    answer = client.post("/v1/scans", content=path.read_bytes(), headers=HEADERS)
+    answer = shared.post("/v1/scans", content=path.read_bytes(), headers=HEADERS)
     assert answer.status_code == 422, answer.text
     assert answer.headers["content-type"] == "application/problem+json"
     assert words in answer.json()["detail"]
-    assert _left_behind(settings) == []
-    assert client.get("/v1/scans").json()["items"] == []
+    assert _left_behind(shared.parts.settings) == []
+    assert shared.get("/v1/scans").json()["items"] == []
 
 
-def test_disagreeing_axes_are_refused(client: Caller, settings: ServiceSettings, tmp_path: Path) -> None:
+def test_disagreeing_axes_are_refused(shared: Caller, tmp_path: Path) -> None:
     path = tmp_path / "wrong.h5"
     _write(path)
     with h5py.File(path, "r+") as file:
         file["kspace"].attrs["axes_fastest_first"] = "ky,kx,coil"
-    answer = client.post("/v1/scans", content=path.read_bytes(), headers=HEADERS)
+    answer = shared.post("/v1/scans", content=path.read_bytes(), headers=HEADERS)
     assert answer.status_code == 422
     assert "axes_fastest_first" in answer.json()["detail"]
-    assert _left_behind(settings) == []
+    assert _left_behind(shared.parts.settings) == []
 
 
 @pytest.mark.parametrize("kept", [0.3, 0.9])
-def test_truncated_file_is_refused(
-    client: Caller, settings: ServiceSettings, make_scan: MakeScan, kept: float
-) -> None:
+def test_truncated_file_is_refused(shared: Caller, make_scan: MakeScan, kept: float) -> None:
     content = make_scan()
-    answer = client.post("/v1/scans", content=content[: int(kept * len(content))], headers=HEADERS)
+    answer = shared.post("/v1/scans", content=content[: int(kept * len(content))], headers=HEADERS)
     assert answer.status_code == 422
     assert "truncated" in answer.json()["detail"] or "HDF5" in answer.json()["detail"]
-    assert _left_behind(settings) == []
+    assert _left_behind(shared.parts.settings) == []
 
 
 @pytest.mark.parametrize("path", ["/v1/scans/unknown", "/v1/scans/unknown/preview.png"])
-def test_unknown_scan_is_not_found(client: Caller, path: str) -> None:
-    answer = client.get(path)
+def test_unknown_scan_is_not_found(shared: Caller, path: str) -> None:
+    answer = shared.get(path)
     assert answer.status_code == 404
     assert "unknown" in answer.json()["detail"]
 
 
 def test_list_goes_page_by_page(client: Caller, make_scan: MakeScan) -> None:
     sent = [
-        client.post("/v1/scans", params={"label": f"n{i % 2}"}, content=make_scan(i), headers=HEADERS).json()["id"]
+        client.post("/v1/scans", params={"label": f"n{i % 2}"}, content=make_scan(i), headers=HEADERS).json()[
+            "id"
+        ]
         for i in range(3)
     ]
     first = client.get("/v1/scans", params={"limit": 2}).json()
@@ -241,8 +246,8 @@ def test_list_goes_page_by_page(client: Caller, make_scan: MakeScan) -> None:
     ],
 )
 def test_filter_that_means_nothing_is_refused(
-    client: Caller, query: dict[str, str], status: int, name: str
+    shared: Caller, query: dict[str, str], status: int, name: str
 ) -> None:
-    answer = client.get("/v1/scans", params=query)
+    answer = shared.get("/v1/scans", params=query)
     assert answer.status_code == status
     assert answer.json()["errors"][0]["parameter"] == name
