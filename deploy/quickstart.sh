@@ -29,7 +29,11 @@ results="$folder/results"
 log="$folder/service.log"
 mkdir -p "$folder"
 
-if [ -f "$folder/service.pid" ] && kill -0 "$(cat "$folder/service.pid")" 2>/dev/null; then
+is_ours() { # PID: a process of this folder, and not another one that got the number of an ended one
+    tr '\0' ' ' 2>/dev/null <"/proc/$1/cmdline" | grep -qF "$folder"
+}
+
+if [ -f "$folder/service.pid" ] && is_ours "$(cat "$folder/service.pid")"; then
     echo "The service of an earlier --keep still runs: stop it with \`kill $(cat "$folder/service.pid")\` first." >&2
     exit 1
 fi

@@ -6,6 +6,7 @@ import os
 import tempfile
 import uuid
 from collections.abc import Iterator, Mapping
+from functools import partial
 from pathlib import Path
 from types import TracebackType
 from typing import Any, Self
@@ -17,6 +18,7 @@ from service.client.arrays import write_arrays
 from service.client.errors import InputRefused
 from service.client.jobs import Job
 from service.client.transport import Transport, digest_header, file_body, is_loopback
+from service.progress import ProgressLine
 from service.settings import client_token, client_url
 
 
@@ -72,6 +74,7 @@ class Client:
         *,
         label: str | None = None,
         priority: str = "routine",
+        progress: bool = False,
     ) -> Job:
         """Send a scan and ask for its reconstruction.
 
@@ -85,6 +88,8 @@ class Client:
         label : str, optional
             A name of your own for scan and job.
         priority : {"routine", "urgent"}
+        progress : bool
+            Show a progress bar on standard error while the scan is sent.
 
         Returns
         -------
@@ -98,20 +103,23 @@ class Client:
             The service refuses the scan or the settings; the exception carries the problem details.
         ServiceUnreachable
         """
-        return self.reconstruct(
-            str(self.upload(scan, label=label)["id"]), settings, label=label, priority=priority
-        )
+        sent = self.upload(scan, label=label, progress=progress)
+        return self.reconstruct(str(sent["id"]), settings, label=label, priority=priority)
 
     def upload(
-        self, scan: str | os.PathLike[str] | Mapping[str, Any], *, label: str | None = None
+        self,
+        scan: str | os.PathLike[str] | Mapping[str, Any],
+        *,
+        label: str | None = None,
+        progress: bool = False,
     ) -> dict[str, Any]:
         """Send a scan alone; the same content again gives the same scan."""
         if isinstance(scan, Mapping):
             with tempfile.TemporaryDirectory(prefix="fallow-") as folder:
                 path = Path(folder) / "scan.h5"
                 write_arrays(path, scan)
-                return self._upload_file(path, label)
-        return self._upload_file(Path(scan), label)
+                return self._upload_file(path, label, progress)
+        return self._upload_file(Path(scan), label, progress)
 
     def reconstruct(
         self,
@@ -166,7 +174,7 @@ class Client:
         """Scans of yours, newest first."""
         return self._items("/v1/scans", {"label": label})
 
-    def _upload_file(self, path: Path, label: str | None) -> dict[str, Any]:
+    def _upload_file(self, path: Path, label: str | None, progress: bool) -> dict[str, Any]:
         if not path.is_file():
             raise InputRefused(f"No scan file at {path}: check the path.")
         if not os.access(path, os.R_OK):
@@ -177,9 +185,10 @@ class Client:
             "Repr-Digest": digest_header(path),
         }
         params = {} if label is None else {"label": label}
-        scan: dict[str, Any] = self._transport.request(
-            "POST", "/v1/scans", params=params, headers=headers, body=file_body(path)
-        ).json()
+        with ProgressLine() as line:
+            body = file_body(path, partial(line.update, "sending") if progress else None)
+            answer = self._transport.request("POST", "/v1/scans", params=params, headers=headers, body=body)
+        scan: dict[str, Any] = answer.json()
         return scan
 
     def _items(self, path: str, filters: Mapping[str, str | None]) -> Iterator[dict[str, Any]]:

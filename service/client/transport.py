@@ -183,13 +183,16 @@ class Transport:
         }
 
 
-def file_body(path: Path) -> Body:
-    """Content of a file, for an upload."""
+def file_body(path: Path, sent: Callable[[float], None] | None = None) -> Body:
+    """Content of a file, for an upload; `sent` hears of the fraction that has gone out."""
 
     def chunks() -> Iterable[bytes]:
+        size = path.stat().st_size
         with path.open("rb") as file:
             while chunk := file.read(_CHUNK):
                 yield chunk
+                if sent is not None:
+                    sent(min(1.0, file.tell() / size))
 
     return chunks
 

@@ -61,7 +61,9 @@ def run_submit(arguments: argparse.Namespace) -> int:
     """Send a scan, ask for its image, and wait for it when told so."""
     settings = read_settings(arguments.settings)
     with _client(arguments) as client:
-        job = client.submit(arguments.scan, settings, label=arguments.label, priority=arguments.priority)
+        job = client.submit(
+            arguments.scan, settings, label=arguments.label, priority=arguments.priority, progress=True
+        )
         if arguments.wait:
             note(f"job {job.id}")
             try:

@@ -56,6 +56,12 @@ def test_dropped_submission_is_repeated_with_the_same_key_and_whole_body(scan_fi
     assert len({order.body for order in orders}) == 1
 
 
+def test_sending_shows_its_progress(scan_file: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    with scripted(answer(SCAN, 201)) as service, Client(service.url, "t") as client:
+        client.upload(scan_file, progress=True)
+    assert capsys.readouterr().err.splitlines()[-1] == "100 %  sending"
+
+
 def test_every_submission_has_a_key_of_its_own(scan_file: Path) -> None:
     with scripted(answer(JOB, 202), answer(JOB, 202)) as service:
         with Client(service.url, "t") as client:
