@@ -203,7 +203,7 @@ class Inspector:
                 "calibration-small",
                 "warning",
                 f"The fully sampled centre of k-space is {rows} x {columns}; coil maps want {COMFORTABLE_BLOCK} or "
-                f"more a side and need {SMALLEST_BLOCK}: sample more lines about the centre, add /reference or supply maps.",
+                f"more a side, and need {SMALLEST_BLOCK}: sample more of the centre, add /reference or supply maps.",
                 "/mask",
                 {"rows": rows, "columns": columns},
             )

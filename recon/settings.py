@@ -115,7 +115,7 @@ class Settings(BaseModel):
         Literal["auto"] | KeepEnergy | KeepCoils | None, BeforeValidator(_compression)
     ] = "auto"
     combination: Literal["sensitivity", "root-sum-of-squares"] = "sensitivity"
-    tolerance: float = Field(default=1e-4, gt=0, lt=1, strict=True, allow_inf_nan=False)
+    tolerance: float = Field(default=5e-5, gt=0, lt=1, strict=True, allow_inf_nan=False)
     max_iterations: int = Field(default=300, ge=1, le=100_000, strict=True)
 
 

@@ -95,10 +95,11 @@ def solve(
 
     Stops when the relative optimality residual falls below `tolerance`:
 
-        max( ||g(x) + s|| / ||E^H d||,  ||p - P(p + sigma D x)|| / (sigma ||D x|| + ||p||) ) < tolerance
+        max( ||g(x) + s|| / ||E^H d||,  (lambda_t TV(x) - Re <p, D x>) / objective ) < tolerance
 
-    g is the gradient of the data term, s the subgradient of the penalties that the proximal map supplies, p the dual
-    field of the TV term and P the projection on its ball: both are zero exactly at the minimiser.
+    g is the gradient of the data term, s the subgradient of the penalties that the proximal map supplies, and p the
+    dual field of the TV term. The first says how far s is from cancelling g; the second, never negative, how far p is
+    from being a subgradient of TV at x. Both are zero exactly at the minimiser.
 
     Parameters
     ----------
@@ -161,37 +162,36 @@ class _Iteration:
         beta = self.b.real.dtype.type((self.t - 1) / t_next)
         y = self.x + beta * (self.x - self.x_before)
         g = self.hx + beta * (self.hx - self.hx_before) - self.b
-        x, dual_residual, penalty = self._prox(y - g / self.lipschitz)
+        x, gap, penalty = self._prox(y - g / self.lipschitz)
         hx = self._normal(x)
         if inner(y - x, x - self.x).real > 0:
             t_next = 1.0
         # the proximal map's own optimality condition supplies the subgradient s = L (y - x) - g(y)
         stationarity = norm(self.lipschitz * (y - x) - g + (hx - self.b)) / self.scale
-        self.optimality = max(stationarity, dual_residual)
         data_term = 0.5 * (inner(x, hx).real + self.data_energy) - inner(x, self.b).real
-        self.objective.append(data_term + penalty)
+        objective = data_term + penalty
+        self.objective.append(objective)
+        self.optimality = max(stationarity, gap / max(objective, np.finfo(np.float64).tiny))
         self.x_before, self.hx_before, self.x, self.hx, self.t = self.x, self.hx, x, hx, t_next
         self.iterations += 1
 
     def _prox(self, v: NDArray[Any]) -> tuple[NDArray[Any], float, float]:
-        """Proximal map of both penalties with step 1/L; also the dual residual and the penalties' value."""
+        """Proximal map of both penalties with step 1/L; also the TV term's duality gap and the penalties' value."""
         step = 1.0 / float(self.lipschitz)
         if self.tv is None:
             x, cost = self._prox_wavelet(v, step)
             return x, 0.0, cost
         # the dual field is kept free of the step: |p| <= lambda_t, and enters as p / L
         D, p, sigma = self.tv.differences, self.p, self.lipschitz * self.b.real.dtype.type(DUAL_STEP)
-        gradient = None
         for _ in range(DUAL_STEPS):
             x, _ = self._prox_wavelet(self._minus_adjoint(v, p), step)
             gradient = D.forward(x[self.window])
             p = project_ball(p + sigma * gradient, self.tv.strength)
         x, wavelet_cost = self._prox_wavelet(self._minus_adjoint(v, p), step)
         gradient = D.forward(x[self.window])
-        residual = norm(p - project_ball(p + sigma * gradient, self.tv.strength))
         self.p = p
-        relative = residual / (float(sigma) * norm(gradient) + norm(p) + np.finfo(np.float64).tiny)
-        return x, relative, wavelet_cost + self.tv.cost(gradient)
+        tv_cost = self.tv.cost(gradient)
+        return x, tv_cost - inner(p, gradient).real, wavelet_cost + tv_cost
 
     def _prox_wavelet(self, v: NDArray[Any], step: float) -> tuple[NDArray[Any], float]:
         return (v, 0.0) if self.wavelet is None else self.wavelet.prox(v, step)
