@@ -15,7 +15,8 @@ Array = NDArray[Any]
 def numpy_transform(image: Array) -> Array:
     """Return the centred unitary FFT over the last two axes, written with numpy alone."""
     axes = (-2, -1)
-    return np.fft.fftshift(np.fft.fft2(np.fft.ifftshift(image, axes=axes), norm="ortho"), axes=axes)
+    kspace: Array = np.fft.fftshift(np.fft.fft2(np.fft.ifftshift(image, axes=axes), norm="ortho"), axes=axes)
+    return kspace
 
 
 def numpy_inverse(kspace: Array) -> Array:
@@ -26,7 +27,8 @@ def numpy_inverse(kspace: Array) -> Array:
 
 def complex_normal(rng: np.random.Generator, shape: tuple[int, ...], dtype: Any = np.complex128) -> Array:
     """Return complex noise with E|n|^2 = 1."""
-    return ((rng.standard_normal(shape) + 1j * rng.standard_normal(shape)) / np.sqrt(2)).astype(dtype)
+    noise: Array = ((rng.standard_normal(shape) + 1j * rng.standard_normal(shape)) / np.sqrt(2)).astype(dtype)
+    return noise
 
 
 def radial_mask(n: int, lines: int) -> NDArray[np.bool_]:
@@ -56,7 +58,8 @@ def line_mask(rows: int, columns: int, every: int, calibration: int) -> NDArray[
 def coil_maps(coils: int, shape: tuple[int, int], dtype: Any = np.complex128) -> Array:
     """Return smooth maps of coils on a ring, shape (coils, rows, columns), with sum |S|^2 near one."""
     maps = np.stack([m.on_grid(shape) for m in ring_coils(coils)])
-    return (maps / np.sqrt(np.mean(np.sum(np.abs(maps) ** 2, axis=0)))).astype(dtype)
+    scaled: Array = (maps / np.sqrt(np.mean(np.sum(np.abs(maps) ** 2, axis=0)))).astype(dtype)
+    return scaled
 
 
 def nrmse(image: Array, truth: Array, *, scaled: bool = False) -> float:
