@@ -10,8 +10,8 @@ from typing import Final
 from recon.settings import Settings
 
 #: lambda_w and lambda_t where the noise is known.
-WAVELET_AUTO: Final = 0.1
-TV_AUTO: Final = 0.2
+WAVELET_AUTO: Final = 0.08
+TV_AUTO: Final = 0.09
 #: weight of 1/2 ||u||^2 where the noise is known.
 TIKHONOV_AUTO: Final = 0.03
 #: fractions of max |u| of the zero-filled image where the scan is free of noise.

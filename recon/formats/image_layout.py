@@ -145,7 +145,7 @@ def read_image(path: Path | str) -> ImageFile:
             report=json.loads(file.attrs["report"]),
             provenance=json.loads(file.attrs["provenance"]),
             attributes={
-                name: value.tolist() if isinstance(value, np.ndarray) else value
+                name: value.tolist() if isinstance(value, np.ndarray | np.generic) else value
                 for name, value in image.attrs.items()
                 if name in _GEOMETRY
             },
