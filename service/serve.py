@@ -6,6 +6,7 @@ import asyncio
 import logging
 import os
 import signal
+import socket
 import time
 from collections.abc import Iterator
 from contextlib import contextmanager
@@ -20,7 +21,7 @@ from service.app import create_app
 from service.logs import configure_logging
 from service.process import how_it_ended, python_command
 from service.provenance import fallow_version
-from service.settings import LOCAL_HOSTS, ServiceSettings, child_environment
+from service.settings import LOCAL_HOSTS, ServiceSettings, SettingError, child_environment
 
 log = logging.getLogger("fallow")
 
@@ -45,10 +46,9 @@ def run_service(settings: ServiceSettings, host: str, port: int, workers: int) -
 
     Raises
     ------
-    OSError
-        The address is taken, or not one of this machine.
     SettingError
-        Another service uses the data folder, or its token file cannot be used.
+        The address is taken, or not one of this machine; another service uses the data folder, or its token file
+        cannot be used.
     """
     configure_logging()
     os.umask(0o077)
@@ -68,7 +68,7 @@ async def _serve(settings: ServiceSettings, host: str, port: int, workers: int) 
         lifespan="off",
         timeout_graceful_shutdown=_GRACE_SECONDS,
     )
-    listener = config.bind_socket()
+    listener = _bound_socket(host, port)
     try:
         async with app.router.lifespan_context(app):
             server = _Server(config, app)
@@ -91,6 +91,21 @@ async def _serve(settings: ServiceSettings, host: str, port: int, workers: int) 
         log.info("stopped")
     finally:
         listener.close()
+
+
+def _bound_socket(host: str, port: int) -> socket.socket:
+    """A socket on the address; uvicorn's own would end the process on a taken one instead of raising."""
+    listener = socket.socket(socket.AF_INET6 if ":" in host else socket.AF_INET)
+    listener.setsockopt(socket.SOL_SOCKET, socket.SO_REUSEADDR, 1)
+    try:
+        listener.bind((host, port))
+    except OSError as error:
+        listener.close()
+        reason = (error.strerror or str(error)).lower()
+        raise SettingError(
+            f"the service cannot listen on {host} port {port} ({reason}): choose another with --port or --host"
+        ) from error
+    return listener
 
 
 class _Server(uvicorn.Server):

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import errno
 import os
 import sys
 from enum import IntEnum
@@ -74,8 +73,6 @@ def _explain_client(error: BaseException) -> tuple[str, ExitCode]:
 
 
 def _explain_os(error: OSError) -> tuple[str, ExitCode]:
-    if error.errno == errno.EADDRINUSE:
-        return "the port is taken by another program: choose another with --port.", ExitCode.REFUSED
     where = f" {error.filename}" if error.filename else ""
     reason = error.strerror or str(error)
     if isinstance(

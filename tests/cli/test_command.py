@@ -78,7 +78,6 @@ def test_commands_for_a_service_load_no_numerics() -> None:
         (JobFailed("j1", "dismissed", None), 3, "was dismissed"),
         (DamagedDownload("damaged"), 1, "damaged"),
         (FallowError("odd"), 1, "odd"),
-        (OSError(errno.EADDRINUSE, "taken"), 2, "--port"),
         (PermissionError(errno.EACCES, "Permission denied", "/x"), 2, "/x"),
         (OSError(errno.ENOSPC, "No space left on device", "/x"), 1, "No space left on device"),
         (MemoryError(), 1, "memory"),
