@@ -9,6 +9,7 @@ from typing import Any
 
 from fastapi import FastAPI, Request
 from fastapi.exceptions import RequestValidationError
+from fastapi.routing import APIRoute
 from starlette.exceptions import HTTPException
 from starlette.middleware import Middleware
 from starlette.responses import Response
@@ -54,6 +55,7 @@ def create_app(settings: ServiceSettings) -> FastAPI:
         # The interactive pages would fetch scripts from elsewhere.
         docs_url=None,
         redoc_url=None,
+        redirect_slashes=False,
         middleware=[
             Middleware(Faults),
             Middleware(HostCheck, hosts=settings.hosts),
@@ -74,4 +76,5 @@ async def _refuse_validation(request: Request, error: Any) -> Response:
 
 
 async def _refuse_http(request: Request, error: Any) -> Response:
-    raise from_http(request, error)
+    routes = [route for router in ROUTERS for route in router.routes if isinstance(route, APIRoute)]
+    raise from_http(request.url.path, request.method, error, routes)

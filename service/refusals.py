@@ -2,12 +2,12 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterable, Iterator, Mapping
 from typing import Any
 
 from fastapi.exceptions import RequestValidationError
+from fastapi.routing import APIRoute
 from starlette.exceptions import HTTPException
-from starlette.requests import Request
 
 from recon.errors import InvalidSettings
 from service.errors import Malformed, MethodNotAllowed, NotFound, Refused, ServiceError, pointers
@@ -29,16 +29,17 @@ def from_validation(error: RequestValidationError) -> ServiceError:
     return Refused(detail, errors=mistakes)
 
 
-def from_http(request: Request, error: HTTPException) -> Exception:
+def from_http(path: str, method: str, error: HTTPException, routes: Iterable[APIRoute]) -> Exception:
     """Turn an error of the framework into one of ours; one that it only wrapped comes out again."""
     if isinstance(error.__cause__, Exception):
         return error.__cause__
     if error.status_code == 404:
-        return NotFound(f"there is nothing at {request.url.path}: see /openapi.json for the paths there are")
+        return NotFound(f"there is nothing at {path}: see /openapi.json for the paths there are")
     if error.status_code == 405:
-        accepted = (error.headers or {}).get("allow", "")
+        methods = {name for route in routes if route.path_regex.match(path) for name in route.methods or ()}
+        accepted = ", ".join(sorted(methods | ({"HEAD"} if "GET" in methods else set())))
         return MethodNotAllowed(
-            f"{request.url.path} does not answer {request.method}; it answers {accepted}",
+            f"{path} does not answer {method}; it answers {accepted}",
             headers={"Allow": accepted},
         )
     return Malformed(str(error.detail))

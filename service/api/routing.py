@@ -116,7 +116,7 @@ def documented(*statuses: int) -> Answers:
     content = {PROBLEM_MEDIA_TYPE: {"schema": {"$ref": "#/components/schemas/Problem"}}}
     return {
         status: {"description": titles[status], "model": Problem, "content": content}
-        for status in sorted({400, 401, 421, 503, *statuses})
+        for status in sorted({400, 401, 421, 422, 503, *statuses})
     }
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import asyncio
+import hashlib
 from typing import Annotated
 
 from fastapi import APIRouter, Query, Request, Response
@@ -87,7 +88,7 @@ async def send_scan(
             repr_digest=request.headers.get("repr-digest"),
         )
         try:
-            fingerprint = f"scan {upload.sha256} {label or ''}"[:64]
+            fingerprint = hashlib.sha256(f"scan {upload.sha256} {label}".encode()).hexdigest()
             if key is not None and before is not None:
                 check_same_request(key, before[0], fingerprint)
                 return JSONResponse(before[1]["body"], before[1]["status"], before[1]["headers"])

@@ -50,9 +50,10 @@ def send(client: Caller, content: bytes) -> dict[str, Any]:
 
 
 class Caller(httpx.Client):
-    """Calls a running application over HTTP; `parts` is what is behind its routes."""
+    """Calls a running application over HTTP; `parts` is what is behind its routes, `loop` where it runs."""
 
     parts: Services
+    loop: asyncio.AbstractEventLoop
 
 
 @contextmanager
@@ -63,9 +64,11 @@ def running(settings: ServiceSettings) -> Iterator[Caller]:
     server = uvicorn.Server(config)
     listener = config.bind_socket()
     started = threading.Event()
+    loops: list[asyncio.AbstractEventLoop] = []
 
     async def serve() -> None:
         async with app.router.lifespan_context(app):
+            loops.append(asyncio.get_running_loop())
             started.set()
             await server.serve(sockets=[listener])
 
@@ -77,6 +80,7 @@ def running(settings: ServiceSettings) -> Iterator[Caller]:
         with Caller(base_url=f"http://127.0.0.1:{listener.getsockname()[1]}", timeout=30) as caller:
             caller.headers["Authorization"] = f"Bearer {token}"
             caller.parts = app.state.services
+            (caller.loop,) = loops
             yield caller
     finally:
         server.should_exit = True
@@ -166,6 +170,11 @@ def order(client: Caller, scan: dict[str, Any]) -> Callable[..., dict[str, Any]]
 @pytest.fixture
 def runner(parts: Services) -> JobRunner:
     """What a worker does with a job, without the queue engine around it."""
+    return runner_of(parts)
+
+
+def runner_of(parts: Services) -> JobRunner:
+    """Build a runner of jobs with the real computing process."""
     return JobRunner(
         AttemptStore(parts.database),
         parts.files,
