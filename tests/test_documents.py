@@ -13,7 +13,7 @@ from tests.readme import ROOT
 @pytest.mark.parametrize("document", ["DEVELOPERS.md", "README.md", "sample_kspace/README.md"])
 def test_every_file_named_exists(document: str) -> None:
     text = (ROOT / document).read_text(encoding="utf-8")
-    named = set(re.findall(r"`((?:recon|service|deploy|tests|benchmarks|sample_kspace)/[\w./]*)", text))
+    named = set(re.findall(r"`((?:recon|service|deploy|tests|benchmarks|sample_kspace)/[\w./-]*)", text))
     assert {name for name in named if not (ROOT / name).exists()} == set()
 
 
