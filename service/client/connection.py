@@ -21,6 +21,10 @@ from service.client.transport import Transport, digest_header, file_body, is_loo
 from service.progress import ProgressLine
 from service.settings import client_token, client_url
 
+#: The service looks through a scan before it answers; a large one takes longer.
+_CHECK_SECONDS = 120.0
+_CHECK_SECONDS_PER_GIB = 240.0
+
 
 class Client:
     """Access to one Fallow service.
@@ -187,7 +191,14 @@ class Client:
         params = {} if label is None else {"label": label}
         with ProgressLine() as line:
             body = file_body(path, partial(line.update, "sending") if progress else None)
-            answer = self._transport.request("POST", "/v1/scans", params=params, headers=headers, body=body)
+            answer = self._transport.request(
+                "POST",
+                "/v1/scans",
+                params=params,
+                headers=headers,
+                body=body,
+                answer_seconds=_CHECK_SECONDS + _CHECK_SECONDS_PER_GIB * path.stat().st_size / (1 << 30),
+            )
         scan: dict[str, Any] = answer.json()
         return scan
 

@@ -36,6 +36,8 @@ class RandomAccessFile(Protocol):
 
 
 _CHUNK = 1 << 20
+_CONNECT_SECONDS = 5.0
+_ANSWER_SECONDS = 60.0
 _FIRST_PAUSE = 0.1
 _LONGEST_PAUSE = 2.0
 
@@ -54,7 +56,7 @@ class Transport:
         self._http = httpx.Client(
             base_url=self.url,
             headers=headers,
-            timeout=httpx.Timeout(60.0, connect=5.0),
+            timeout=httpx.Timeout(_ANSWER_SECONDS, connect=_CONNECT_SECONDS),
             # A proxy set for the outside world must not swallow calls to this machine.
             trust_env=not is_loopback(self.url),
         )
@@ -73,6 +75,7 @@ class Transport:
         json: Any = None,
         body: Body | None = None,
         patience: float | None = None,
+        answer_seconds: float = _ANSWER_SECONDS,
         is_retried: Callable[[httpx.Response], bool] = lambda response: False,
     ) -> httpx.Response:
         """Send one request and return the answer, of a 2xx status.
@@ -82,7 +85,9 @@ class Transport:
         body : callable, optional
             Gives the content from its beginning; called anew for each try.
         patience : float, optional
-            Seconds during which a dropped connection or a 503 is tried again.
+            Seconds, from the first failure on, during which a dropped connection or a 503 is tried again.
+        answer_seconds : float, optional
+            Seconds after which a silent service counts as gone.
         is_retried : callable, optional
             Which further answers are worth another try.
 
@@ -90,7 +95,8 @@ class Transport:
         ------
         ServiceUnreachable, RequestRefused, ServiceFault
         """
-        deadline = time.monotonic() + (self.patience if patience is None else patience)
+        patience = self.patience if patience is None else patience
+        deadline: float | None = None
         pause = _FIRST_PAUSE
         while True:
             try:
@@ -101,14 +107,18 @@ class Transport:
                     headers=dict(headers or {}),
                     json=json,
                     content=None if body is None else body(),
+                    timeout=httpx.Timeout(answer_seconds, connect=_CONNECT_SECONDS),
                 )
             except httpx.TransportError as error:
+                # An upload may have taken long before it broke off: patience begins here.
+                deadline = time.monotonic() + patience if deadline is None else deadline
                 if time.monotonic() + pause > deadline:
                     raise self._unreachable(error) from error
             else:
                 if response.is_success:
                     return response
                 asked = _retry_after(response) if response.status_code in {429, 503} else 0.0
+                deadline = time.monotonic() + patience if deadline is None else deadline
                 is_worth_it = response.status_code in {429, 503} or is_retried(response)
                 if not is_worth_it or time.monotonic() + max(pause, asked) > deadline:
                     raise self._failure(response)
@@ -127,7 +137,7 @@ class Transport:
             The content does not match its `Repr-Digest`.
         ServiceUnreachable, RequestRefused, ServiceFault
         """
-        deadline = time.monotonic() + self.patience
+        deadline: float | None = None
         pause = _FIRST_PAUSE
         etag: str | None = None
         while True:
@@ -145,10 +155,12 @@ class Transport:
                     etag = response.headers.get("ETag")
                     for chunk in response.iter_raw():
                         target.write(chunk)
-                        deadline = time.monotonic() + self.patience
+                        if etag:  # What has arrived is kept: this is progress, and patience begins anew.
+                            deadline, pause = None, _FIRST_PAUSE
                     _check_digest(target, response.headers.get("Repr-Digest"), path)
                     return
             except httpx.TransportError as error:
+                deadline = time.monotonic() + self.patience if deadline is None else deadline
                 if time.monotonic() + pause > deadline:
                     raise self._unreachable(error) from error
             time.sleep(pause)

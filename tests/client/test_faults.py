@@ -62,6 +62,17 @@ def test_sending_shows_its_progress(scan_file: Path, capsys: pytest.CaptureFixtu
     assert capsys.readouterr().err.splitlines()[-1] == "100 %  sending"
 
 
+def test_upload_that_breaks_off_late_is_tried_again(scan_file: Path) -> None:
+    """Patience counts from the break, not from the beginning of a long upload."""
+
+    def slow(request: Received) -> Step:
+        time.sleep(0.5)
+        return DROP
+
+    with scripted(slow, answer(SCAN, 201)) as service, Client(service.url, "t", patience=0.2) as client:
+        assert client.upload(scan_file)["id"] == "s1"
+
+
 def test_every_submission_has_a_key_of_its_own(scan_file: Path) -> None:
     with scripted(answer(JOB, 202), answer(JOB, 202)) as service:
         with Client(service.url, "t") as client:
