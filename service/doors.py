@@ -8,6 +8,7 @@ import re
 from typing import Any, Final
 
 from starlette.datastructures import Headers
+from starlette.requests import ClientDisconnect
 from starlette.types import ASGIApp, Message, Receive, Scope, Send
 
 from service.errors import PROBLEM_MEDIA_TYPE, Misdirected, TooLarge, problem_of
@@ -39,6 +40,8 @@ class Faults:
 
         try:
             await self._app(scope, receive, noting_send)
+        except ClientDisconnect:
+            log.info("the caller of %s %s went away", scope["method"], scope["path"])
         except Exception as error:
             if is_started:
                 # Too late for another answer: the connection breaks off, which tells the client that it is incomplete.

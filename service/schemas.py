@@ -9,6 +9,7 @@ from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, StringConstr
 
 from recon.caution import CAUTION
 from recon.settings import Settings, parse_settings
+from service.store.estimates import Estimate
 from service.store.jobs import JobRecord
 from service.store.scans import ScanRecord
 
@@ -122,7 +123,7 @@ class JobOut(BaseModel):
     caution: str = CAUTION
 
     @classmethod
-    def of(cls, job: JobRecord, estimate: tuple[int | None, float | None]) -> JobOut:
+    def of(cls, job: JobRecord, estimate: Estimate) -> JobOut:
         """Describe a row; `estimate` is what `Estimates.of` says of it."""
         position, seconds = estimate
         return cls(

@@ -123,7 +123,8 @@ def list_jobs(parts: Parts, caller: Caller, wanted: ListFilter) -> JobPage:
     """List jobs, newest first."""
     check_state(wanted.state, STATES)
     found, cursor = parts.jobs.page(caller.owner, wanted)
-    return JobPage(items=[JobOut.of(job, parts.estimates.of(job)) for job in found], next=cursor)
+    estimates = parts.estimates.of_all(found)
+    return JobPage(items=[JobOut.of(*pair) for pair in zip(found, estimates, strict=True)], next=cursor)
 
 
 @router.get("/{job_id}", response_model=JobOut, responses=documented(404))

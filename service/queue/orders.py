@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import logging
 import threading
 from typing import Any
@@ -19,6 +20,8 @@ from service.store.jobs import JobRecord
 
 log = logging.getLogger("fallow")
 
+#: Every so many sweeps one is thorough.
+_THOROUGH_EVERY = 10
 _UNDER_WAY = frozenset({"ENQUEUED", "DELAYED", "PENDING"})
 
 
@@ -78,23 +81,30 @@ class JobQueue:
         self._client.destroy()
         self._engine.dispose()
 
-    def sweep(self) -> None:
-        """Put in every job without a place, and free those whose worker is dead."""
+    def sweep(self, *, is_thorough: bool = True) -> None:
+        """Put in every job without a place, and free those whose worker is dead.
+
+        Parameters
+        ----------
+        is_thorough : bool
+            Also compare every unfinished row with its workflow, which takes long when thousands wait.
+        """
         for job in self._attempts.unqueued():
             self.put(job)
-        queued = {job.id: job for job in self._attempts.queued()}
-        if not queued:
-            return
-        known = {status.workflow_id: status for status in self._statuses(list(queued))}
         silent = self._workers.silent()
-        for job in queued.values():
-            status = known.get(job.id)
-            if status is None:
+        for status in self._client.list_workflows(status="PENDING", load_input=False, load_output=False):
+            self._free(status.workflow_id, status.executor_id or "", silent)
+        if is_thorough:
+            self._compare()
+
+    def _compare(self) -> None:
+        queued = self._attempts.queued()
+        known = {status.workflow_id: status.status for status in self._statuses([job.id for job in queued])}
+        for job in queued:
+            if job.id not in known:
                 log.warning("job %s has lost its place in the queue and gets a new one", job.id)
                 self._attempts.mark_unqueued(job.id)
-            elif status.status == "PENDING":
-                self._free(job.id, status.executor_id or "", silent)
-            elif status.status not in _UNDER_WAY:
+            elif known[job.id] not in _UNDER_WAY:
                 self._end(job.id)
 
     def _statuses(self, job_ids: list[str]) -> list[Any]:
@@ -107,9 +117,16 @@ class JobQueue:
 
     def _free(self, job_id: str, executor: str, silent: set[str]) -> None:
         with vacant(self._locks, executor) as is_gone:
-            if is_gone or executor in silent:
+            # Looked at again while the place is kept empty: somebody else may have freed it just before.
+            if (is_gone or executor in silent) and self._is_held_by(job_id, executor):
                 log.warning("worker %s is dead: job %s goes back to the queue", executor, job_id)
                 self._client.resume_workflow(job_id, queue_name=QUEUE)
+
+    def _is_held_by(self, job_id: str, executor: str) -> bool:
+        return any(
+            status.status == "PENDING" and (status.executor_id or "") == executor
+            for status in self._statuses([job_id])
+        )
 
     def _end(self, job_id: str) -> None:
         """End a row whose workflow has ended without ending it, which only a fault of ours can do."""
@@ -120,9 +137,9 @@ class JobQueue:
         )
 
     def _sweep_repeatedly(self) -> None:
-        while True:
+        for number in itertools.count():
             try:
-                self.sweep()
+                self.sweep(is_thorough=number % _THOROUGH_EVERY == 0)
             except Exception:
                 log.exception("the sweep of the queue failed and is tried again")
             if self._stop.wait(self._sweep_seconds):

@@ -5,6 +5,8 @@ from __future__ import annotations
 import statistics
 import threading
 import time
+from bisect import bisect_left
+from collections.abc import Sequence
 from datetime import timedelta
 
 import sqlalchemy as sa
@@ -12,6 +14,9 @@ import sqlalchemy as sa
 from service.store.database import Database
 from service.store.jobs import JobRecord
 from service.store.tables import jobs, now, workers
+
+#: Place in the queue, and seconds left.
+Estimate = tuple[int | None, float | None]
 
 _REMEMBERED = 100
 _REFRESH_SECONDS = 5.0
@@ -29,35 +34,48 @@ class Estimates:
         self._paces: dict[str, float] = {}
         self._read_at = float("-inf")
 
-    def of(self, job: JobRecord) -> tuple[int | None, float | None]:
+    def of(self, job: JobRecord) -> Estimate:
         """Place in the queue (1: next) of a waiting job, and seconds left of an unfinished one.
 
         Either is None where it does not apply or cannot be known.
         """
-        if job.state == "running":
-            return None, self._running(job)
-        if job.state != "accepted":
-            return None, None
+        return self.of_all([job])[0]
+
+    def of_all(self, asked: Sequence[JobRecord]) -> list[Estimate]:
+        """The same for many jobs, from one look at the queue."""
+        if any(job.state == "accepted" for job in asked):
+            turns, until_start = self._queue()
+        found: list[Estimate] = []
+        for job in asked:
+            if job.state == "accepted":
+                place = bisect_left(turns, job.turn)
+                start, own = until_start[place], self._expected(job.pace, job.work)
+                found.append((place + 1, None if start is None or own is None else start + own))
+            else:
+                found.append((None, self._running(job) if job.state == "running" else None))
+        return found
+
+    def _queue(self) -> tuple[list[int], list[float | None]]:
+        """Turns of all waiting jobs in order, and the seconds until the one at each place starts."""
         with self._database.read() as connection:
-            ahead = connection.execute(
-                sa.select(jobs.c.pace, sa.func.count(), sa.func.sum(jobs.c.work))
-                .where(jobs.c.state == "accepted", jobs.c.turn < job.turn)
-                .group_by(jobs.c.pace)
+            waiting = connection.execute(
+                sa.select(jobs.c.turn, jobs.c.pace, jobs.c.work)
+                .where(jobs.c.state == "accepted")
+                .order_by(jobs.c.turn)
             ).all()
             running = connection.execute(sa.select(jobs).where(jobs.c.state == "running")).all()
             living = connection.execute(
                 sa.select(sa.func.count()).select_from(workers).where(workers.c.seen_at > now() - self._dead)
             ).scalar_one()
-        position = 1 + sum(count for _, count, _ in ahead)
-        seconds = [self._expected(pace, work) for pace, _, work in ahead]
-        seconds += [self._running(JobRecord(**row._mapping)) for row in running]
-        own = self._expected(job.pace, job.work)
-        if own is None or living == 0:
-            return position, None
-        known = [part for part in seconds if part is not None]
-        if len(known) < len(seconds):
-            return position, None
-        return position, own + sum(known) / living
+        work = [self._running(JobRecord(**row._mapping)) for row in running]
+        total = None if living == 0 or None in work else sum(part for part in work if part is not None)
+        starts: list[float | None] = []
+        for row in waiting:
+            starts.append(None if total is None else total / living)
+            expected = self._expected(row.pace, row.work)
+            total = None if total is None or expected is None else total + expected
+        starts.append(None if total is None else total / living)
+        return [row.turn for row in waiting], starts
 
     def _running(self, job: JobRecord) -> float | None:
         if job.attempt_started_at is None:

@@ -4,7 +4,10 @@ from __future__ import annotations
 
 import base64
 import hashlib
+import socket
+import time
 from collections.abc import Callable
+from dataclasses import replace
 from datetime import UTC, datetime, timedelta
 from pathlib import Path
 from typing import Any
@@ -16,7 +19,7 @@ import pytest
 from recon.caution import CAUTION
 from service.settings import ServiceSettings
 
-from .conftest import MEDIA_TYPE, UPLOAD_LIMIT, Caller, MakeScan
+from .conftest import MEDIA_TYPE, UPLOAD_LIMIT, Caller, MakeScan, running
 
 HEADERS = {"Content-Type": MEDIA_TYPE}
 
@@ -251,3 +254,37 @@ def test_filter_that_means_nothing_is_refused(
     answer = shared.get("/v1/scans", params=query)
     assert answer.status_code == status
     assert answer.json()["errors"][0]["parameter"] == name
+
+
+def test_stalled_upload_is_given_up(tmp_path: Path, make_scan: MakeScan) -> None:
+    settings = replace(ServiceSettings(data=tmp_path / "data"), stall_seconds=0.3)
+    with running(settings) as caller:
+        port, token = caller.base_url.port, caller.headers["authorization"]
+        with socket.create_connection(("127.0.0.1", port or 0), timeout=20) as line:
+            head = (
+                f"POST /v1/scans HTTP/1.1\r\nHost: localhost\r\nAuthorization: {token}\r\n"
+                f"Content-Type: {MEDIA_TYPE}\r\nContent-Length: 100000\r\n\r\n"
+            )
+            line.sendall(head.encode() + make_scan()[:100])
+            answer = b"".join(iter(lambda: line.recv(65536), b""))
+        assert b" 408 " in answer.splitlines()[0]
+        assert b"urn:fallow:problem:stalled-upload" in answer
+        assert _left_behind(settings) == []
+
+
+def test_caller_who_goes_away_leaves_nothing(
+    client: Caller, make_scan: MakeScan, settings: ServiceSettings
+) -> None:
+    port, token = client.base_url.port, client.headers["authorization"]
+    with socket.create_connection(("127.0.0.1", port or 0), timeout=20) as line:
+        head = (
+            f"POST /v1/scans HTTP/1.1\r\nHost: localhost\r\nAuthorization: {token}\r\n"
+            f"Content-Type: {MEDIA_TYPE}\r\nContent-Length: 100000\r\n\r\n"
+        )
+        line.sendall(head.encode() + make_scan()[:100])
+        while not _left_behind(settings):
+            time.sleep(0.02)
+    deadline = time.monotonic() + 10
+    while _left_behind(settings):
+        assert time.monotonic() < deadline
+        time.sleep(0.02)
