@@ -118,6 +118,17 @@ def test_arrays_give_the_image_of_the_same_file(client: Client, tmp_path: Path) 
     np.testing.assert_array_equal(client.submit(arrays).wait(timeout=120).image(), from_file)
 
 
+def test_image_is_that_of_the_command_without_a_service(
+    client: Client, tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    """Same scan, same settings, same version: the same bytes, whoever computes."""
+    good(tmp_path / "scan.h5")
+    remote = client.submit(tmp_path / "scan.h5").wait(timeout=120).image()
+    assert main(["reconstruct", str(tmp_path / "scan.h5"), "-o", str(tmp_path / "image.h5")]) == 0
+    with h5py.File(tmp_path / "image.h5") as file:
+        np.testing.assert_array_equal(file["image"][()], remote)
+
+
 def test_same_scan_twice_is_one_scan(client: Client, tmp_path: Path) -> None:
     good(tmp_path / "scan.h5")
     assert client.upload(tmp_path / "scan.h5")["id"] == client.upload(tmp_path / "scan.h5")["id"]
