@@ -21,11 +21,11 @@ from typing import Any, Final, Literal
 import numpy as np
 from numpy.typing import NDArray
 
-from recon.operators.base import inner, norm
+from recon import kernels
+from recon.operators.base import norm
 from recon.operators.differences import Differences
 from recon.operators.encoding import Encoding
 from recon.operators.wavelet import Wavelet
-from recon.penalties import TotalVariation, WaveletL1, project_ball
 
 #: dual steps for each proximal map; two were the cheapest on heads of two scanners (three: as many iterations).
 DUAL_STEPS: Final = 2
@@ -128,25 +128,28 @@ def solve(
 
 
 class _Iteration:
-    """State of the iteration and its pure arithmetic. x, y, p, g, t as in the papers named above."""
+    """State of the iteration and its arithmetic. x, p, g, t as in the papers named above.
+
+    Arrays are padded images of three axes (a plane has one slab); the compiled loops see them as real numbers.
+    """
 
     def __init__(self, problem: Problem, start: Solution | None) -> None:
         encoding = problem.encoding
         self.encoding = encoding
         rows, columns = encoding.domain_shape
+        self.transform = Wavelet((rows, columns), problem.wavelet)
+        self.wavelet_strength = problem.wavelet_strength if self.transform.levels > 0 else 0.0
+        self.tv_strength = problem.tv_strength
         self.shape = (rows, columns)
-        transform = Wavelet(self.shape, problem.wavelet)
-        has_wavelet = problem.wavelet_strength > 0 and transform.levels > 0
-        self.wavelet = WaveletL1(transform, problem.wavelet_strength) if has_wavelet else None
-        differences = Differences(self.shape)
-        self.tv = TotalVariation(differences, problem.tv_strength) if problem.tv_strength > 0 else None
-        self.padded_shape = transform.domain_shape if has_wavelet else self.shape
+        self.padded_shape = self.transform.domain_shape if self.wavelet_strength > 0 else self.shape
         self.window = tuple(slice(0, n) for n in self.shape)
 
         self.b = self._embed(encoding.adjoint(problem.data))
+        self.real = self.b.real.dtype.type
+        self.weights = np.ones(3, self.real)
         self.data_energy = norm(problem.data) ** 2
         self.scale = norm(self.b)
-        self.lipschitz = self.b.real.dtype.type(encoding.squared_norm_bound())
+        self.lipschitz = self.real(encoding.squared_norm_bound())
         self.x = np.zeros_like(self.b) if start is None else start.padded.copy()
         self.p = np.zeros((2, *self.shape), self.b.dtype) if start is None else start.dual.copy()
         self.hx = self._normal(self.x)
@@ -159,48 +162,62 @@ class _Iteration:
     def step(self) -> None:
         """One accelerated proximal-gradient step with restart, and the optimality residual at its end."""
         t_next = (1 + np.sqrt(1 + 4 * self.t**2)) / 2
-        beta = self.b.real.dtype.type((self.t - 1) / t_next)
-        y = self.x + beta * (self.x - self.x_before)
-        g = self.hx + beta * (self.hx - self.hx_before) - self.b
-        x, gap, penalty = self._prox(y - g / self.lipschitz)
+        beta, step = self.real((self.t - 1) / t_next), self.real(1 / self.lipschitz)
+        state = (_flat(self.x), _flat(self.x_before), _flat(self.hx), _flat(self.hx_before), _flat(self.b))
+        v = np.empty_like(self.b)
+        kernels.extrapolated_step(*state, beta, step, _flat(v))
+        x, gap, penalty = self._prox(v)
         hx = self._normal(x)
-        if inner(y - x, x - self.x).real > 0:
+        # the proximal map's own optimality condition supplies the subgradient s = L (y - x) - g(y) = L (v - x)
+        sums = kernels.progress_sums(
+            _flat(x),
+            _flat(hx),
+            _flat(v),
+            _flat(self.b),
+            _flat(self.x),
+            _flat(self.x_before),
+            beta,
+            self.lipschitz,
+        )
+        stationarity, quadratic, linear, restart = sums
+        if restart > 0:
             t_next = 1.0
-        # the proximal map's own optimality condition supplies the subgradient s = L (y - x) - g(y)
-        stationarity = norm(self.lipschitz * (y - x) - g + (hx - self.b)) / self.scale
-        data_term = 0.5 * (inner(x, hx).real + self.data_energy) - inner(x, self.b).real
-        objective = data_term + penalty
+        objective = 0.5 * (quadratic + self.data_energy) - linear + penalty
         self.objective.append(objective)
-        self.optimality = max(stationarity, gap / max(objective, np.finfo(np.float64).tiny))
+        tiny = np.finfo(np.float64).tiny
+        self.optimality = max(np.sqrt(stationarity) / self.scale, gap / max(objective, tiny))
         self.x_before, self.hx_before, self.x, self.hx, self.t = self.x, self.hx, x, hx, t_next
         self.iterations += 1
 
     def _prox(self, v: NDArray[Any]) -> tuple[NDArray[Any], float, float]:
         """Proximal map of both penalties with step 1/L; also the TV term's duality gap and the penalties' value."""
-        step = 1.0 / float(self.lipschitz)
-        if self.tv is None:
-            x, cost = self._prox_wavelet(v, step)
-            return x, 0.0, cost
+        x = np.empty_like(v)
+        if self.tv_strength == 0:
+            x[...] = v
+            return x, 0.0, self._prox_wavelet(x)
         # the dual field is kept free of the step: |p| <= lambda_t, and enters as p / L
-        D, p, sigma = self.tv.differences, self.p, self.lipschitz * self.b.real.dtype.type(DUAL_STEP)
+        p, inverse, radius = _deep(self.p), self.real(1 / self.lipschitz), self.real(self.tv_strength)
+        sigma, none = self.real(DUAL_STEP * self.lipschitz), self.real(0)
         for _ in range(DUAL_STEPS):
-            x, _ = self._prox_wavelet(self._minus_adjoint(v, p), step)
-            gradient = D.forward(x[self.window])
-            p = project_ball(p + sigma * gradient, self.tv.strength)
-        x, wavelet_cost = self._prox_wavelet(self._minus_adjoint(v, p), step)
-        gradient = D.forward(x[self.window])
-        self.p = p
-        tv_cost = self.tv.cost(gradient)
-        return x, tv_cost - inner(p, gradient).real, wavelet_cost + tv_cost
+            kernels.subtract_divergence(_deep(v), p, inverse, self.weights, _deep(x))
+            self._prox_wavelet(x)
+            kernels.ascend_dual(p, _deep(x), sigma, self.weights, radius, none, True)
+        kernels.subtract_divergence(_deep(v), p, inverse, self.weights, _deep(x))
+        wavelet_cost = self._prox_wavelet(x)
+        variation, _, product = kernels.variation_sums(p, _deep(x), self.weights, True)
+        tv_cost = self.tv_strength * variation
+        return x, tv_cost - product, wavelet_cost + tv_cost
 
-    def _prox_wavelet(self, v: NDArray[Any], step: float) -> tuple[NDArray[Any], float]:
-        return (v, 0.0) if self.wavelet is None else self.wavelet.prox(v, step)
-
-    def _minus_adjoint(self, v: NDArray[Any], p: NDArray[Any]) -> NDArray[Any]:
-        assert self.tv is not None
-        out = v.copy()
-        out[self.window] -= self.tv.differences.adjoint(p) / self.lipschitz
-        return out
+    def _prox_wavelet(self, x: NDArray[Any]) -> float:
+        """Exact proximal map of the wavelet term with step 1/L, in place; returns its value."""
+        if self.wavelet_strength == 0:
+            return 0.0
+        real, (low, high) = _deep(x), self.transform.filters(self.b.dtype)
+        rows, columns = self.transform.approximation_shape
+        kernels.analyse(real, low, high, self.transform.levels)
+        size = kernels.shrink(real, self.real(self.wavelet_strength / self.lipschitz), (1, rows, columns))
+        kernels.synthesise(real, low, high, self.transform.levels)
+        return self.wavelet_strength * size
 
     def _normal(self, x: NDArray[Any]) -> NDArray[Any]:
         return self._embed(self.encoding.normal(x[self.window]))
@@ -223,3 +240,13 @@ class _Iteration:
             iterations=self.iterations,
             stop_reason=reason,
         )
+
+
+def _flat(x: NDArray[Any]) -> NDArray[Any]:
+    """All entries as real numbers in one row."""
+    return x.reshape(-1).view(x.real.dtype)
+
+
+def _deep(x: NDArray[Any]) -> NDArray[Any]:
+    """A plane, or a field of planes, as real numbers with a slab axis before the rows."""
+    return x.view(x.real.dtype)[..., np.newaxis, :, :]

@@ -17,6 +17,7 @@ import numpy as np
 import scipy.fft
 from numpy.typing import NDArray
 
+from recon import kernels
 from recon.operators.base import LinearOperator
 from recon.operators.fourier import inverse_transform, transform
 
@@ -44,7 +45,7 @@ class Encoding(LinearOperator):
     """
 
     def __init__(self, maps: NDArray[Any], mask: NDArray[np.bool_]) -> None:
-        self.maps = maps
+        self.maps = np.ascontiguousarray(maps)
         self.axes = transform_axes(mask)
         self.domain_shape = maps.shape[1:]
         self.range_shape = maps.shape
@@ -79,15 +80,16 @@ class Encoding(LinearOperator):
 
     def normal(self, x: NDArray[Any]) -> NDArray[Any]:
         """E^H E x plus x outside the object, coil by coil so that each coil's plane stays in the cache."""
+        x = np.ascontiguousarray(x)
         out = np.zeros_like(x) if self._outside is None else self._outside * x
         plane = np.empty_like(x)
-        for conjugate, map_ in zip(self._conjugate_maps, self.maps, strict=True):
-            np.multiply(map_, x, out=plane)
+        flat, sums, real = x.reshape(-1), out.reshape(-1), x.real.dtype
+        for map_ in self.maps.reshape(len(self.maps), -1):
+            kernels.weigh(map_.view(real), flat.view(real), plane.reshape(-1).view(real))
             spectrum = scipy.fft.fftn(plane, axes=self.axes, overwrite_x=True)
             spectrum *= self._plain_mask
             image = scipy.fft.ifftn(spectrum, axes=self.axes, overwrite_x=True)
-            image *= conjugate
-            out += image
+            kernels.add_conjugate(map_.view(real), image.reshape(-1).view(real), sums.view(real))
         return out
 
     def squared_norm_bound(self) -> float:

@@ -13,6 +13,7 @@ import numpy as np
 import pywt
 from numpy.typing import NDArray
 
+from recon import kernels
 from recon.operators.base import LinearOperator
 
 MOST_LEVELS: Final = 4
@@ -41,36 +42,19 @@ class Wavelet(LinearOperator):
         """Size of the corner block that holds the approximation coefficients, which are not penalised."""
         return tuple(n // 2**self.levels for n in self.domain_shape)
 
+    def filters(self, dtype: Any) -> tuple[NDArray[Any], NDArray[Any]]:
+        """Analysis filters (low, high) in the real precision of a complex dtype."""
+        real = np.zeros(0, dtype).real.dtype
+        return np.array(self._wavelet.dec_lo, real), np.array(self._wavelet.dec_hi, real)
+
     def forward(self, x: NDArray[Any]) -> NDArray[Any]:
         """Coefficients of a padded image, approximation in the leading corner."""
-        out = np.array(x)
-        for level in range(self.levels):
-            rows, columns = (n >> level for n in self.domain_shape)
-            block = out[:rows, :columns]
-            low, high = pywt.dwt(block, self._wavelet, "periodization", axis=0)
-            half = rows // 2
-            for part, at in ((low, slice(0, half)), (high, slice(half, rows))):
-                block[at, : columns // 2], block[at, columns // 2 :] = pywt.dwt(
-                    part, self._wavelet, "periodization", axis=1
-                )
+        out = np.array(x, order="C")
+        kernels.analyse(out.view(out.real.dtype)[np.newaxis], *self.filters(out.dtype), self.levels)
         return out
 
     def adjoint(self, y: NDArray[Any]) -> NDArray[Any]:
         """Padded image of coefficients: the transform is orthogonal, so the adjoint is the inverse."""
-        out = np.array(y)
-        for level in reversed(range(self.levels)):
-            rows, columns = (n >> level for n in self.domain_shape)
-            block = out[:rows, :columns]
-            half = rows // 2
-            low, high = (
-                pywt.idwt(
-                    block[at, : columns // 2],
-                    block[at, columns // 2 :],
-                    self._wavelet,
-                    "periodization",
-                    axis=1,
-                )
-                for at in (slice(0, half), slice(half, rows))
-            )
-            block[...] = pywt.idwt(low, high, self._wavelet, "periodization", axis=0)
+        out = np.array(y, order="C")
+        kernels.synthesise(out.view(out.real.dtype)[np.newaxis], *self.filters(out.dtype), self.levels)
         return out
