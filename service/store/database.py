@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import sqlite3
+import time
 from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
@@ -16,6 +17,8 @@ from alembic.script import ScriptDirectory
 
 _MIGRATIONS = Path(__file__).parent / "migrations"
 _BUSY_MILLISECONDS = 30_000
+#: The first SQLite that knows fractions of a second, which the queue engine asks for on Python 3.12 and later.
+_SUBSECOND_SQLITE: Final = (3, 42)
 
 
 def make_engine(url: str) -> sa.Engine:
@@ -35,12 +38,19 @@ def _prepare_connection(connection: Any, record: object) -> None:
     if isinstance(connection, sqlite3.Connection):
         # The driver would begin transactions on its own, and too late.
         connection.isolation_level = None
+        if sqlite3.sqlite_version_info < _SUBSECOND_SQLITE:
+            connection.create_function("unixepoch", 1, _unixepoch)
     cursor = connection.cursor()
     cursor.execute(f"PRAGMA busy_timeout={_BUSY_MILLISECONDS}")
     cursor.execute("PRAGMA journal_mode=WAL")
     cursor.execute("PRAGMA synchronous=FULL")
     cursor.execute("PRAGMA foreign_keys=ON")
     cursor.close()
+
+
+def _unixepoch(modifier: str) -> float | None:
+    """What newer versions of SQLite answer to `unixepoch('subsec')`; the older ones answer NULL."""
+    return round(time.time(), 3) if modifier == "subsec" else None
 
 
 def _begin(connection: sa.Connection) -> None:
