@@ -6,13 +6,16 @@ from typing import Any
 
 import numpy as np
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
 
 from recon.axes import LabelledArray
+from recon.errors import CalibrationMissing
 from recon.phantom import ring_coils
 from recon.pipeline import reconstruct
 from recon.scan import PlaneIndex, Scan
 from recon.settings import Settings, parse_settings
-from tests.recon.helpers import numpy_transform, radial_mask
+from tests.recon.helpers import complex_normal, numpy_transform, radial_mask
 from tests.recon.scans import error, example
 
 CASES: dict[str, dict[str, Any]] = {
@@ -22,7 +25,7 @@ CASES: dict[str, dict[str, Any]] = {
     "odd both": {"shape": (51, 43)},
     "wide": {"shape": (40, 72)},
     "tall": {"shape": (76, 33)},
-    "one coil": {"coils": 1, "every": 1},
+    "one coil": {"coils": 1, "every": 1, "noise": 0.01},
     "two coils": {"coils": 2},
     "32 coils": {"coils": 32, "every": 3},
     "one slice": {"sizes": {"slice": 1}},
@@ -155,6 +158,51 @@ def test_samples_outside_the_mask_have_no_influence() -> None:
         )
     )
     np.testing.assert_array_equal(one.image, other.image)
+
+
+def test_phase_between_frames_survives() -> None:
+    """One set of maps and one phase reference for a slice: what changes from frame to frame is in the image."""
+    found = example(noise=0.005)
+    kspace = found.scan.kspace_array.take()
+    turns = np.exp(1j * np.array([0.0, 0.7, 2.5]))
+    frames = (turns[:, None, None, None] * kspace).astype(np.complex64)
+    result = reconstruct(
+        Scan(
+            LabelledArray(frames, ("frame", "coil", "ky", "kx")),
+            mask_array=found.scan.mask_array,
+            noise_array=found.scan.noise_array,
+        )
+    )
+    inside = result.image[:, found.inside]
+    difference = np.angle(np.sum(inside[1:] * inside[:1].conj(), axis=1))
+    np.testing.assert_allclose(difference, [0.7, 2.5], atol=0.005)
+
+
+@settings(max_examples=60)
+@given(
+    st.integers(1, 14), st.integers(1, 14), st.integers(1, 4), st.booleans(), st.floats(0.2, 1), st.booleans()
+)
+def test_any_small_scan_gives_a_finite_image_or_a_clear_refusal(
+    rows: int, columns: int, coils: int, has_noise: bool, density: float, is_line_mask: bool
+) -> None:
+    rng = np.random.default_rng(rows * 1000 + columns * 10 + coils)
+    mask = rng.random((rows, 1 if is_line_mask else columns)) < density
+    mask = np.broadcast_to(mask, (rows, columns)).copy()
+    mask[rows // 2, columns // 2] = True
+    scan = Scan(
+        LabelledArray(complex_normal(rng, (coils, rows, columns), np.complex64), ("coil", "ky", "kx")),
+        mask_array=LabelledArray(mask, ("ky", "kx")),
+        noise_array=LabelledArray(complex_normal(rng, (coils, 40), np.complex64), ("coil", "sample"))
+        if has_noise
+        else None,
+    )
+    try:
+        result = reconstruct(scan, Settings(max_iterations=20))
+    except CalibrationMissing:
+        return
+    assert result.image.shape == (rows, columns)
+    assert np.isfinite(result.image).all()
+    assert np.isfinite(result.residual_image).all()
 
 
 def test_a_single_coil_without_a_coil_axis() -> None:
