@@ -163,7 +163,7 @@ def child_environment(**extra: str) -> dict[str, str]:
 
     Several workers share the cores already; threads of their own made one step ten times slower.
     """
-    threads = ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS", "NUMEXPR_NUM_THREADS")
+    threads = ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS", "NUMBA_NUM_THREADS")
     secrets = {"FALLOW_TOKEN"}
     kept = {name: value for name, value in os.environ.items() if name not in secrets}
     return {**kept, **dict.fromkeys(threads, "1"), "PYTHONUNBUFFERED": "1", **extra}

@@ -67,15 +67,19 @@ def running(settings: ServiceSettings) -> Iterator[Caller]:
     loops: list[asyncio.AbstractEventLoop] = []
 
     async def serve() -> None:
-        async with app.router.lifespan_context(app):
-            loops.append(asyncio.get_running_loop())
+        try:
+            async with app.router.lifespan_context(app):
+                loops.append(asyncio.get_running_loop())
+                started.set()
+                await server.serve(sockets=[listener])
+        finally:
             started.set()
-            await server.serve(sockets=[listener])
 
     thread = threading.Thread(target=asyncio.run, args=(serve(),))
     thread.start()
     try:
-        assert started.wait(20)
+        assert started.wait(60)
+        assert loops, "the application did not start"
         token = settings.token_file.read_text().strip()
         with Caller(base_url=f"http://127.0.0.1:{listener.getsockname()[1]}", timeout=30) as caller:
             caller.headers["Authorization"] = f"Bearer {token}"
