@@ -167,7 +167,15 @@ def write_sample(folder: Path) -> list[Path]:
     }
     axes = ("slice", "coil", "ky", "kx")
     full, under = folder / "cut_fruit_full.h5", folder / "cut_fruit_undersampled.h5"
-    write_scan(full, sample.kspace, axes, title="Orchard bench: cut fruit, every line", **common)
+    write_scan(
+        full,
+        sample.kspace,
+        axes,
+        mask=np.ones_like(sample.mask),
+        mask_axes=("ky",),
+        title="Orchard bench: cut fruit, every line",
+        **common,
+    )
     write_scan(
         under,
         sample.kspace * sample.mask[:, None],

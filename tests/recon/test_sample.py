@@ -3,13 +3,16 @@
 from __future__ import annotations
 
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import pytest
 
 from recon.formats import open_scan
-from recon.phantom import rasterise
+from recon.phantom import pixel_centres, rasterise
+from recon.pipeline import reconstruct
 from recon.scan import PlaneIndex
+from recon.settings import parse_settings
 from sample_kspace.make_sample import (
     ACCELERATION,
     CALIBRATION_LINES,
@@ -23,6 +26,7 @@ from sample_kspace.make_sample import (
     make_sample,
     write_sample,
 )
+from tests.recon.helpers import Array
 
 FOLDER = Path(__file__).parents[2] / "sample_kspace"
 NAMES = ("cut_fruit_full.h5", "cut_fruit_undersampled.h5")
@@ -42,7 +46,9 @@ def test_files_hold_what_the_generator_makes(sample: Sample, name: str) -> None:
         np.testing.assert_allclose(noise, sample.noise, rtol=0, atol=1e-5 * np.abs(sample.noise).max())
         for index in scan.planes():
             expected = sample.kspace[index.slice]
-            if name == "cut_fruit_undersampled.h5":
+            if name == "cut_fruit_full.h5":
+                assert scan.mask(index).all()
+            else:
                 expected = expected * sample.mask[:, None]
                 np.testing.assert_array_equal(scan.mask(index), np.repeat(sample.mask[:, None], MATRIX[1], 1))
             kspace = scan.kspace(index)
@@ -94,3 +100,59 @@ def test_undersampled_scan_shows_zeros_where_nothing_was_measured(sample: Sample
         kspace = scan.kspace(PlaneIndex(slice=1))
         assert not kspace[:, ~sample.mask].any()
         assert kspace[:, sample.mask].all()
+
+
+def _reconstruct(name: str, **values: Any) -> tuple[Array, dict[str, Any]]:
+    with open_scan(FOLDER / name) as scan:
+        result = reconstruct(scan, parse_settings(values))
+    return np.abs(result.image).astype(np.float64), result.report
+
+
+def _contrast(image: Array, centre: tuple[float, float], radius: float) -> float:
+    """Return the mean within a radius over the mean of a ring about it, less one; centre as `fruit` has it."""
+    y, x = (pixel_centres(n) for n in MATRIX)
+    distance = np.hypot(y[:, None] - centre[1], x[None, :] - centre[0])
+    ring = (distance > 1.6 * radius) & (distance < 2.2 * radius)
+    return float(image[distance < 0.7 * radius].mean() / image[ring].mean() - 1)
+
+
+def test_sample_gives_the_image_that_the_readme_promises() -> None:
+    """Figures of `sample_kspace/README.md`, against the least-squares image of the fully sampled twin."""
+    full, report = _reconstruct(NAMES[0], wavelet_strength=0, tv_strength=0)
+    assert report["findings"] == []
+    inside = full > 0.1 * full.max()
+
+    def error(image: Array) -> float:
+        return float(np.linalg.norm((image - full)[inside]) / np.linalg.norm(full[inside]))
+
+    ours, report = _reconstruct(NAMES[1])
+    assert report["findings"] == []
+    assert report["solver"]["converged_planes"] == 2
+    assert report["consistency"]["reduced_chi_squared"]["value"] == pytest.approx(0.9, abs=0.06)
+    assert error(ours) == pytest.approx(0.044, abs=0.005)
+    assert error(_reconstruct(NAMES[1], method="tikhonov")[0]) == pytest.approx(0.10, abs=0.01)
+    assert error(_reconstruct(NAMES[1], method="zero-filled")[0]) == pytest.approx(0.14, abs=0.01)
+    tunnel = fruit(1)[-1]
+    for image in (full, ours):
+        assert _contrast(image[1], tunnel.centre, tunnel.semi_axes[0]) < -0.15
+
+
+def test_faint_patch_is_a_tenth_darker_and_survives() -> None:
+    patch = fruit(0)[-1]
+    assert patch.value == pytest.approx(-0.1 * 0.8, rel=0.01)
+    y, x = (pixel_centres(n) for n in MATRIX)
+    turn = np.deg2rad(patch.angle)
+    dx, dy = x[None, :] - patch.centre[0], y[:, None] - patch.centre[1]
+    along, across = np.cos(turn) * dx + np.sin(turn) * dy, np.cos(turn) * dy - np.sin(turn) * dx
+    distance = np.hypot(along / patch.semi_axes[0], across / patch.semi_axes[1])
+    flesh = rasterise(fruit(0)[:-1], MATRIX).real > 0.6
+    levels = []
+    for name in NAMES:
+        image, _ = _reconstruct(name)
+        levels.append(
+            image[0][flesh & (distance < 0.8)].mean()
+            / image[0][flesh & (distance > 1.2) & (distance < 1.9)].mean()
+        )
+    assert levels[0] < 0.97
+    assert levels[1] < 0.97
+    assert levels[1] == pytest.approx(levels[0], abs=0.03)
