@@ -57,7 +57,6 @@ def compute(order: dict[str, Any], teller: Teller) -> None:
     """
     # Imported here, so that a failure to import is told like any other.
     from recon.pipeline import reconstruct_file
-
     from recon.settings import parse_settings
     from service.pictures import result_png
     from service.provenance import add_duration, collect

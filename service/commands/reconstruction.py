@@ -15,7 +15,6 @@ from types import FrameType
 from typing import Any
 
 from recon.pipeline import reconstruct_file
-
 from recon.settings import parse_settings
 from service.pictures import result_png
 from service.progress import ProgressLine
