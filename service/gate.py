@@ -91,10 +91,7 @@ class Gate:
 
     def _judge(self, returncode: int | None, answer: bytes, words: bytes, seconds: float) -> dict[str, Any]:
         if returncode == 0 and len(answer) <= _LONGEST_ANSWER:
-            try:
-                document: dict[str, Any] = json.loads(answer)
-            except ValueError:
-                document = {}
+            document = _parsed(answer)
             if "facts" in document:
                 return document
             if "refused" in document:
@@ -111,3 +108,11 @@ class Gate:
             f"the process that examined the file ended by {ending}: the file is damaged or beyond the limits; check "
             "that it opens with h5py, or write it anew"
         )
+
+
+def _parsed(answer: bytes) -> dict[str, Any]:
+    try:
+        document = json.loads(answer)
+    except ValueError:
+        return {}
+    return document if isinstance(document, dict) else {}

@@ -37,16 +37,17 @@ def die_with_parent(parent: int, with_signal: signal.Signals = signal.SIGKILL) -
 
 def limit(*, memory: int, seconds: int, file_bytes: int, files: int) -> None:
     """Limit this process for good: address space, processor time, size of a written file, open files; no core dump."""
-    for kind, value in (
-        (resource.RLIMIT_AS, memory),
-        (resource.RLIMIT_CPU, seconds),
-        (resource.RLIMIT_FSIZE, file_bytes),
-        (resource.RLIMIT_NOFILE, files),
-        (resource.RLIMIT_CORE, 0),
+    for kind, soft, hard in (
+        (resource.RLIMIT_AS, memory, memory),
+        # Between the two the process gets SIGXCPU, which tells its parent why it ended; then it is killed.
+        (resource.RLIMIT_CPU, seconds, seconds + 1),
+        (resource.RLIMIT_FSIZE, file_bytes, file_bytes),
+        (resource.RLIMIT_NOFILE, files, files),
+        (resource.RLIMIT_CORE, 0, 0),
     ):
         _, highest = resource.getrlimit(kind)
-        bound = value if highest == resource.RLIM_INFINITY else min(value, highest)
-        resource.setrlimit(kind, (bound, bound))
+        bound = hard if highest == resource.RLIM_INFINITY else min(hard, highest)
+        resource.setrlimit(kind, (min(soft, bound), bound))
 
 
 def private_output() -> int:

@@ -31,6 +31,7 @@ def run_worker(settings: ServiceSettings) -> None:
     It does not return: threads of the queue engine would keep the interpreter from ending.
     """
     configure_logging()
+    os.umask(0o077)
     stop = threading.Event()
 
     def ask_to_stop(number: int, frame: FrameType | None) -> None:
