@@ -72,10 +72,12 @@ def test_memory_is_limited(settings: ServiceSettings, tmp_path: Path) -> None:
 
 def test_processor_time_is_limited(settings: ServiceSettings, upload: Path) -> None:
     limits = replace(settings, gate_seconds=1.0, gate_seconds_per_gib=0.0)
-    endless = (
-        "import sys\nfrom service.process import limit\n"
-        "file_bytes=1, files=9)\nwhile True: pass\n"
-    )
+    endless = """
+import sys
+from service.process import limit
+limit(memory=1 << 31, seconds=int(sys.argv[5]), file_bytes=1, files=9)
+while True: pass
+"""
     with pytest.MonkeyPatch.context() as patch:
         module = stand_in(patch, upload.parent, endless)
         with pytest.raises(ScanRefused, match="more than 1 s of processor time"):
