@@ -17,7 +17,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from typing import Any, Final, Literal
 
-from service.errors import COMPUTING_DIED, INTERNAL, WORKERS_DIED, problem
+from service.errors import COMPUTING_DIED, INTERNAL, WORKERS_DIED, problem, problem_of
 from service.process import how_it_ended, python_command
 from service.settings import child_environment
 from service.store.attempts import AttemptStore
@@ -105,6 +105,9 @@ class JobRunner:
             except Stopped:
                 self._store.hand_back(job)
                 raise
+            except Exception as error:  # noqa: BLE001 - whatever it is, the job ends with it and the worker goes on
+                document = problem_of(error)[0]
+                outcome = Outcome("failed", error={"stage": None, "remedy": _remedy(document), **document})
             if outcome.kind != "died":
                 self._conclude(job, outcome)
                 return

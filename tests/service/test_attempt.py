@@ -140,6 +140,24 @@ def test_refusal_fails_the_job_at_once(database: Database, runner: JobRunner) ->
     assert "settings" in job.error["remedy"]
 
 
+def test_full_disk_fails_the_job_and_not_the_worker(
+    database: Database, files: Files, runner: JobRunner, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    def no_space(*arguments: object) -> Path:
+        raise OSError(28, "No space left on device")
+
+    job, other = _job(database), _job(database)
+    with monkeypatch.context() as patch:
+        patch.setattr(files, "new_draft", no_space)
+        runner.run(job.id)
+    job = _now(database, job)
+    assert job.state == "failed"
+    assert job.error is not None
+    assert (job.error["status"], "disk" in job.error["detail"]) == (503, True)
+    runner.run(other.id)
+    assert _now(database, other).state == "successful"
+
+
 def test_incomplete_results_are_no_success(database: Database, files: Files, runner: JobRunner) -> None:
     job = _job(database, unsealed=True)
     runner.run(job.id)
