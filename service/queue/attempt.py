@@ -105,7 +105,7 @@ class JobRunner:
             except Stopped:
                 self._store.hand_back(job)
                 raise
-            except Exception as error:  # noqa: BLE001 - whatever it is, the job ends with it and the worker goes on
+            except Exception as error:  # the job ends with it, the worker goes on
                 document = problem_of(error)[0]
                 outcome = Outcome("failed", error={"stage": None, "remedy": _remedy(document), **document})
             if outcome.kind != "died":
