@@ -13,7 +13,7 @@ from recon.coils.adaptive import adaptive_maps
 from recon.coils.calibration import calibration_block, central_block, check_block
 from recon.coils.combination import root_sum_of_squares, sensitivity_weighted
 from recon.coils.compression import Compression
-from recon.coils.eigenvector import eigenvector_maps
+from recon.coils.eigenvector import eigenvector_maps, interpolate
 from recon.coils.noise import whitening_from
 from recon.errors import CalibrationMissing, InvalidSettings
 from recon.phantom import Ellipse, SmoothMap, ellipse_kspace, rasterise, ring_coils, wave_phase
@@ -88,6 +88,32 @@ def test_eigenvalue_is_one_inside_the_object_and_maps_are_the_true_ones(coils: i
     on_grid = np.stack([m.on_grid((64, 60)) for m in true])
     assert np.quantile(alignment(maps, on_grid)[inside], 0.01) > 0.995
     np.testing.assert_allclose(np.linalg.norm(maps, axis=0)[inside], 1, atol=1e-5)
+
+
+@pytest.mark.parametrize(("coarse", "fine"), [(40, 97), (41, 96), (40, 120), (33, 33)])
+def test_interpolated_maps_stay_centred(coarse: int, fine: int) -> None:
+    """Linear interpolation of a wave is off by (2 pi / m)^2 / 8; half a pixel's shift by 20 times that."""
+
+    def wave(n: int) -> Array:
+        r = (np.arange(n) - n // 2) / n
+        return np.asarray(np.exp(2j * np.pi * r)[:, None] * np.exp(-2j * np.pi * r)[None, :])
+
+    found = interpolate(wave(coarse)[None], (fine, fine))[0]
+    assert np.abs(found - wave(fine)).max() < 2 * (2 * np.pi / coarse) ** 2 / 8 + 1e-12
+
+
+@pytest.mark.parametrize("shape", [(61, 57), (121, 101)])
+def test_maps_of_a_point_symmetric_scan_are_point_symmetric(shape: tuple[int, int]) -> None:
+    """The origin is the centre of pixel n // 2 for maps too: on odd sizes reflection maps the grid on itself."""
+    coils = ring_coils(6)
+    kspace = ellipse_kspace([Ellipse(1.0, (0, 0), (0.6, 0.7), 20)], (65, 65), maps=coils)[:, 22:43, 22:43]
+    gram = kspace.reshape(6, -1) @ kspace.reshape(6, -1).conj().T
+    reference = Compression(gram, None, has_noise_units=False).reference
+    maps, eigenvalue = eigenvector_maps([kspace], shape, reference, has_noise_units=False)
+    np.testing.assert_allclose(eigenvalue, eigenvalue[::-1, ::-1], atol=2e-3)
+    inside = rasterise([Ellipse(1, (0, 0), (0.55, 0.65), 20)], shape).real > 0
+    reflected = np.roll(maps, 3, axis=0)[:, ::-1, ::-1]  # a coil's opposite is three places on
+    np.testing.assert_allclose(np.abs(maps)[:, inside], np.abs(reflected)[:, inside], atol=2e-3)
 
 
 @pytest.mark.parametrize("method", ["eigenvector", "adaptive"])
