@@ -160,5 +160,5 @@ def test_peak_memory_does_not_grow_with_the_number_of_slices(tmp_path: Path) -> 
     )
     assert (few["planes"], many["planes"]) == (4, 40)
     assert many["scan_mb"] - few["scan_mb"] > 35
-    assert many["peak_mb"] - few["peak_mb"] < 12
+    assert many["peak_mb"] - few["peak_mb"] < 20
     assert many["peak_mb"] < memory.LIMIT_MB
