@@ -122,35 +122,62 @@ def merge_axis1(
 
 
 @_compiled
-def analyse(x: Real, low: Real, high: Real, levels: int) -> None:
-    """Periodized wavelet transform of the last two of three axes, in place, approximation in the leading corner."""
+def filter_slabs(x: Real, slabs: int, rows: int, width: int, low: Real, high: Real, is_inverse: bool) -> None:
+    """`filter_axis0`, or its adjoint, along the first of three axes of the leading block, in place."""
+    gathered = np.empty((slabs, width), x.dtype)
+    filtered = np.empty_like(gathered)
+    for i in range(rows):
+        for s in range(slabs):
+            for j in range(width):
+                gathered[s, j] = x[s, i, j]
+        if is_inverse:
+            merge_axis0(gathered, filtered, slabs, width, low, high)
+        else:
+            filter_axis0(gathered, filtered, slabs, width, low, high)
+        for s in range(slabs):
+            for j in range(width):
+                x[s, i, j] = filtered[s, j]
+
+
+@_compiled
+def analyse(x: Real, low: Real, high: Real, levels: int, slab_levels: int) -> None:
+    """Periodized wavelet transform in place, approximation in the leading corner.
+
+    The last two of three axes are transformed `levels` times, the first as well for the first `slab_levels` of them.
+    """
     slabs, rows, width = x.shape
     scratch = np.empty((rows, width), x.dtype)
     even = np.empty(width // 2 + 4 * low.size, x.dtype)
     odd = np.empty_like(even)
-    for s in range(slabs):
-        plane = x[s]
-        for level in range(levels):
-            r, w = rows >> level, 2 * ((width // 2) >> level)
+    for level in range(levels):
+        r, w = rows >> level, 2 * ((width // 2) >> level)
+        depth = slabs >> min(level, slab_levels)
+        for s in range(depth):
+            plane = x[s]
             filter_axis0(plane, scratch, r, w, low, high)
             for i in range(r):
                 source, target = scratch[i], plane[i]
                 for j in range(w):
                     target[j] = source[j]
             filter_axis1(plane, r, w, low, high, even, odd)
+        if level < slab_levels:
+            filter_slabs(x, depth, r, w, low, high, False)
 
 
 @_compiled
-def synthesise(x: Real, low: Real, high: Real, levels: int) -> None:
+def synthesise(x: Real, low: Real, high: Real, levels: int, slab_levels: int) -> None:
     """The adjoint, and inverse, of `analyse`, in place."""
     slabs, rows, width = x.shape
     scratch = np.empty((rows, width), x.dtype)
     first = np.empty(width // 2 + 4 * low.size, x.dtype)
     second, even, odd = np.empty_like(first), np.empty_like(first), np.empty_like(first)
-    for s in range(slabs):
-        plane = x[s]
-        for level in range(levels - 1, -1, -1):
-            r, w = rows >> level, 2 * ((width // 2) >> level)
+    for level in range(levels - 1, -1, -1):
+        r, w = rows >> level, 2 * ((width // 2) >> level)
+        depth = slabs >> min(level, slab_levels)
+        if level < slab_levels:
+            filter_slabs(x, depth, r, w, low, high, True)
+        for s in range(depth):
+            plane = x[s]
             merge_axis1(plane, r, w, low, high, first, second, even, odd)
             merge_axis0(plane, scratch, r, w, low, high)
             for i in range(r):

@@ -105,6 +105,7 @@ def tikhonov(
         image=x,
         padded=x,
         dual=np.zeros((2, *x.shape), x.dtype),
+        low_rank_dual=None,
         objective=objective,
         optimality=optimality,
         iterations=iteration,

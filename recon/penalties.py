@@ -73,7 +73,7 @@ class WaveletL1:
 
 
 class TotalVariation:
-    """f(x) = strength sum_r sqrt(|D_1 x(r)|^2 + |D_2 x(r)|^2), isotropic (Rudin, Osher & Fatemi 1992)."""
+    """f(x) = strength sum_r sqrt(sum_a |D_a x(r)|^2), isotropic (Rudin, Osher & Fatemi 1992)."""
 
     def __init__(self, differences: Differences, strength: float) -> None:
         self.differences = differences
@@ -85,7 +85,26 @@ class TotalVariation:
 
     def cost(self, gradient: NDArray[Any]) -> float:
         """f(x) when D x is already at hand."""
-        squares = (
-            gradient[0].real ** 2 + gradient[0].imag ** 2 + gradient[1].real ** 2 + gradient[1].imag ** 2
-        )
+        squares = np.sum(gradient.real**2 + gradient.imag**2, axis=0)
         return self.strength * float(np.sum(np.sqrt(squares), dtype=np.float64))
+
+
+def nuclear_norm(x: NDArray[Any]) -> float:
+    """||x||_*: the sum of singular values of the matrix (frame, pixel)."""
+    return float(np.sum(np.sqrt(np.maximum(np.linalg.eigvalsh(_gram(x)), 0))))
+
+
+def project_spectral(q: NDArray[Any], radius: float) -> NDArray[Any]:
+    """Nearest matrix (frame, pixel) whose singular values are at most `radius`: the dual ball of the nuclear norm.
+
+    The few frames make it an eigenproblem of a (frame, frame) matrix (Cai, Candes & Shen 2010).
+    """
+    values, vectors = np.linalg.eigh(_gram(q))
+    scale = radius / np.maximum(np.sqrt(np.maximum(values, 0)), radius)
+    shrink = ((vectors * scale) @ vectors.conj().T).astype(q.dtype)
+    return np.asarray((shrink @ q.reshape(len(q), -1)).reshape(q.shape))
+
+
+def _gram(x: NDArray[Any]) -> NDArray[np.complex128]:
+    flat = x.reshape(len(x), -1)
+    return np.asarray(flat @ flat.conj().T, np.complex128)

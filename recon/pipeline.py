@@ -3,7 +3,8 @@
     read -> inspect -> whiten -> crop readout oversampling -> compress coils -> coil maps -> solve -> combine
     -> consistency -> write
 
-Memory does not grow with the number of planes: one is read, solved, judged and written before the next.
+Memory does not grow with the number of planes: one (or one series of frames that are tied together) is read, solved,
+judged and written before the next.
 """
 
 from __future__ import annotations
@@ -19,7 +20,7 @@ from numpy.typing import NDArray
 from recon.coils.maps import CoilMaps
 from recon.consistency import ResidualFigures
 from recon.formats import ImageWriter, open_scan
-from recon.plane import reconstruct_plane
+from recon.plane import reconstruct_together
 from recon.preparation import Preparation, prepare
 from recon.report import SolverFigures, build_report
 from recon.scan import PlaneIndex, Scan
@@ -146,24 +147,26 @@ def _run(
     scan = preparation.scan
     residuals = ResidualFigures(preparation.shape, preparation.whitening, scan.axes)
     solver = SolverFigures()
-    planes = scan.planes()
+    groups = preparation.groups()
     maps: CoilMaps | None = None
     current: int | None = None
-    for done, index in enumerate(planes):
-        tell.plane(done, len(planes))
-        if index.slice != current and preparation.map_method is not None:
+    for done, group in enumerate(groups):
+        tell.group(done, len(groups))
+        position = group[0].slice
+        if position != current and preparation.map_method is not None:
             tell("coil-maps")
-            maps = preparation.map_maker().make(index.slice, preparation.whitened_blocks(index.slice))
-        current = index.slice
-        kspace, mask = preparation.load(index)
+            maps = preparation.map_maker().make(position, preparation.whitened_blocks(position))
+        current = position
+        planes = [preparation.load(index) for index in group]
         tell("solve")
-        result = reconstruct_plane(preparation, maps, kspace, mask, tell.iteration(preparation.settings))
-        tell("consistency")
-        residuals.see(index, result.residuals, kspace, mask)
-        solver.see(index, result.solution)
-        tell("write")
-        sink.write("image", index, result.image)
-        sink.write("residual_image", index, result.residual_image)
+        results = reconstruct_together(preparation, maps, planes, tell.iteration(preparation.settings))
+        solver.see(group, results[0].solution)
+        for index, (kspace, mask), result in zip(group, planes, results, strict=True):
+            tell("consistency")
+            residuals.see(index, result.residuals, kspace, mask)
+            tell("write")
+            sink.write("image", index, result.image)
+            sink.write("residual_image", index, result.residual_image)
     return build_report(preparation, residuals, solver, provenance)
 
 
@@ -185,9 +188,9 @@ class _Teller:
         """Progress within the pass over all data, the first part of the job."""
         self(stage, _PREPARED * fraction)
 
-    def plane(self, done: int, planes: int) -> None:
-        """A new plane begins."""
-        self.width = (_PLANES_DONE - _PREPARED) / planes
+    def group(self, done: int, groups: int) -> None:
+        """A new plane, or series of planes, begins."""
+        self.width = (_PLANES_DONE - _PREPARED) / groups
         self.start = _PREPARED + done * self.width
         self.fraction = max(self.fraction, self.start)
 

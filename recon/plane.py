@@ -1,4 +1,4 @@
-"""One plane from samples to image: solve, combine, residual."""
+"""One plane, or the frames of a series together, from samples to image: solve, combine, residual."""
 
 from __future__ import annotations
 
@@ -42,60 +42,115 @@ class PlaneResult:
     solution: Solution | None
 
 
-def reconstruct_plane(
+def reconstruct_together(
     preparation: Preparation,
     maps: CoilMaps | None,
-    kspace: NDArray[Any],
-    mask: NDArray[np.bool_],
+    planes: list[tuple[NDArray[Any], NDArray[np.bool_]]],
     callback: Callback | None = None,
-) -> PlaneResult:
-    """Solve one plane by the settings' method and combine.
+) -> list[PlaneResult]:
+    """Solve one plane, or the frames of a series as one problem, by the settings' method and combine.
 
     Parameters
     ----------
     preparation : Preparation
     maps : CoilMaps or None
-        None for the coil-by-coil method, which needs none.
-    kspace : complex64 (coil, rows, columns)
-        Whitened samples of all coils.
-    mask : bool (rows, columns)
+        Shared by the planes; None for the coil-by-coil method, which needs none.
+    planes : list of (kspace, mask)
+        Whitened samples of all coils, complex64 (coil, rows, columns), and bool (rows, columns).
     callback : callable, optional
         Called as callback(iteration, optimality).
+
+    Returns
+    -------
+    list of PlaneResult
+        One for each plane; the solution of a series is the same object in each.
     """
     if maps is None:
-        return _coil_by_coil(preparation, kspace, mask)
-    settings, kappa = preparation.settings, np.float32(preparation.kappa)
-    encoding = Encoding(maps.virtual / kappa, mask)
+        return [_coil_by_coil(preparation, kspace, mask) for kspace, mask in planes]
+    if len(planes) == 1:
+        kspace, mask = planes[0]
+        u, solution = _solve_plane(preparation, maps, kspace, mask, callback)
+        return [_finish(preparation, maps, u, kspace, mask, solution)]
+    u, solution = _solve_series(preparation, maps, planes, callback)
+    pairs = zip(u, planes, strict=True)
+    return [_finish(preparation, maps, frame, kspace, mask, solution) for frame, (kspace, mask) in pairs]
+
+
+def _solve_plane(
+    preparation: Preparation,
+    maps: CoilMaps,
+    kspace: NDArray[Any],
+    mask: NDArray[np.bool_],
+    callback: Callback | None,
+) -> tuple[NDArray[Any], Solution | None]:
+    """u of one plane."""
+    settings = preparation.settings
+    encoding = Encoding(maps.virtual / np.float32(preparation.kappa), mask)
     virtual = preparation.compression.apply(kspace)
-    solution: Solution | None = None
     if settings.method == "zero-filled":
-        u = zero_filled(encoding, virtual, mask)
-    elif settings.method == "tikhonov":
+        return zero_filled(encoding, virtual, mask), None
+    data = encoding.to_range(virtual)
+    if settings.method == "tikhonov":
         solution = tikhonov(
             encoding,
-            encoding.to_range(virtual),
+            data,
             float(settings.tikhonov_strength),
             tolerance=settings.tolerance,
             max_iterations=settings.max_iterations,
             callback=callback,
         )
-        u = solution.image
     else:
-        problem = Problem(
-            encoding,
-            encoding.to_range(virtual),
-            settings.wavelet,
-            float(settings.wavelet_strength),
-            float(settings.tv_strength),
-        )
-        solution = solve(
-            problem, tolerance=settings.tolerance, max_iterations=settings.max_iterations, callback=callback
-        )
-        u = solution.image
-    m = np.where(maps.support, u / kappa, 0).astype(np.complex64)
+        strengths = float(settings.wavelet_strength), float(settings.tv_strength)
+        solution = _solve(preparation, Problem(encoding, data, settings.wavelet, *strengths), callback)
+    return solution.image, solution
+
+
+def _solve_series(
+    preparation: Preparation,
+    maps: CoilMaps,
+    planes: list[tuple[NDArray[Any], NDArray[np.bool_]]],
+    callback: Callback | None,
+) -> tuple[NDArray[Any], Solution]:
+    """u of all frames of a slice, (frame, rows, columns)."""
+    settings = preparation.settings
+    masks = np.stack([mask for _, mask in planes])
+    encoding = Encoding(maps.virtual[:, np.newaxis] / np.float32(preparation.kappa), masks, "series")
+    data = encoding.to_range(
+        np.stack([preparation.compression.apply(kspace) for kspace, _ in planes], axis=1)
+    )
+    problem = Problem(
+        encoding,
+        data,
+        settings.wavelet,
+        float(settings.wavelet_strength),
+        float(settings.tv_strength),
+        float(settings.temporal_strength),
+        float(settings.low_rank_strength),
+    )
+    solution = _solve(preparation, problem, callback)
+    return solution.image, solution
+
+
+def _solve(preparation: Preparation, problem: Problem, callback: Callback | None) -> Solution:
+    settings = preparation.settings
+    return solve(
+        problem, tolerance=settings.tolerance, max_iterations=settings.max_iterations, callback=callback
+    )
+
+
+def _finish(
+    preparation: Preparation,
+    maps: CoilMaps,
+    u: NDArray[Any],
+    kspace: NDArray[Any],
+    mask: NDArray[np.bool_],
+    solution: Solution | None,
+) -> PlaneResult:
+    """Image units, residual and combination of one plane."""
+    m = np.where(maps.support, u / np.float32(preparation.kappa), 0).astype(np.complex64)
     residuals = consistency.residual(m, maps.whitened, kspace, mask)
     difference = consistency.residual_image(residuals, maps.whitened)
-    if settings.combination == "root-sum-of-squares":
+    if preparation.settings.combination == "root-sum-of-squares":
         m = root_sum_of_squares(mix(preparation.whitening.unwhitener, maps.whitened * m))
     return PlaneResult(_cropped(preparation, m), _cropped(preparation, difference), residuals, solution)
 

@@ -70,6 +70,19 @@ class Preparation:
             mask = np.broadcast_to(mask[:, :1], self.shape)
         return kspace, mask
 
+    def groups(self) -> list[list[PlaneIndex]]:
+        """Planes that are solved together: the frames of a slice and contrast if something ties them, else one each."""
+        settings, planes = self.settings, self.scan.planes()
+        is_tied = settings.method == "compressed-sensing" and (
+            float(settings.temporal_strength) > 0 or float(settings.low_rank_strength) > 0
+        )
+        if not is_tied or self.scan.axes.get("frame", 1) == 1 or self.map_method is None:
+            return [[index] for index in planes]
+        series: dict[tuple[int, int], list[PlaneIndex]] = {}
+        for index in planes:
+            series.setdefault((index.slice, index.contrast), []).append(index)
+        return list(series.values())
+
     def figures(self) -> dict[str, Any]:
         """The stages' own figures for the report."""
         return {

@@ -24,15 +24,16 @@ class SolverFigures:
     def __init__(self) -> None:
         self.planes: list[dict[str, Any]] = []
 
-    def see(self, index: PlaneIndex, solution: Solution | None) -> None:
-        """Take in one plane's solution."""
+    def see(self, group: list[PlaneIndex], solution: Solution | None) -> None:
+        """Take in the solution of one plane, or of planes solved together."""
         if solution is None:
             return
         history = solution.objective
         step = max(1, -(-len(history) // HISTORY_LENGTH))
         self.planes.append(
             {
-                **index._asdict(),
+                **group[0]._asdict(),
+                "frames": len(group),
                 "iterations": solution.iterations,
                 "stop_reason": solution.stop_reason,
                 "optimality": solution.optimality,

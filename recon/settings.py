@@ -39,6 +39,12 @@ def _strength(value: object) -> object:
     return float(value)
 
 
+def _number_strength(value: object) -> object:
+    if value == "auto":
+        raise ValueError(f"expected a number from 0 to {STRENGTH_LIMIT:g} in noise units, received 'auto'")
+    return _strength(value)
+
+
 def _wavelet(value: object) -> object:
     if value not in WAVELETS:
         raise ValueError(f"expected one of {', '.join(WAVELETS)}, received {value!r}")
@@ -87,6 +93,11 @@ class Settings(BaseModel):
     method : {"compressed-sensing", "tikhonov", "zero-filled"}
     wavelet_strength, tv_strength : "auto" or float
         Weights lambda_w and lambda_t of the objective, in noise units. `auto` is a fixed value (`recon.strengths`).
+    temporal_strength : "auto" or float
+        Weight of the total variation along `frame`, which joins the frames of a slice into one problem;
+        0: each frame alone.
+    low_rank_strength : float
+        Weight of the nuclear norm of the matrix (frame, pixel); joins the frames likewise.
     tikhonov_strength : "auto" or float
         Weight of 1/2 ||u||^2 in noise units, used by the method `tikhonov`.
     wavelet : str
@@ -106,6 +117,8 @@ class Settings(BaseModel):
     method: Literal["compressed-sensing", "tikhonov", "zero-filled"] = "compressed-sensing"
     wavelet_strength: Strength = "auto"
     tv_strength: Strength = "auto"
+    temporal_strength: Strength = 0.0
+    low_rank_strength: Annotated[float, BeforeValidator(_number_strength)] = 0.0
     tikhonov_strength: Strength = "auto"
     wavelet: Annotated[str, BeforeValidator(_wavelet), Field(json_schema_extra={"enum": list(WAVELETS)})] = (
         "db4"

@@ -1,6 +1,10 @@
 """Accelerated proximal gradient for the wavelet-l1 + total-variation problem.
 
     minimise over u   1/2 ||E u - d||^2 + lambda_w ||W u~||_1 (detail coefficients) + lambda_t TV(u)
+                      + lambda_f TV_frames(u) + lambda_r ||u||_*
+
+u is a plane, a volume (TV isotropic over three axes, W along all of them) or a series of planes (TV and W in each
+frame; total variation along the frames and the nuclear norm of the matrix (frame, pixel) join the frames).
 
 u~ is u with the margin that brings its size to one on which W is orthogonal; the margin is free (it costs nothing in
 the data term), so nothing is assumed about what lies beyond the border. Sizes that fit have no margin.
@@ -22,15 +26,18 @@ import numpy as np
 from numpy.typing import NDArray
 
 from recon import kernels
-from recon.operators.base import norm
-from recon.operators.differences import Differences
+from recon.operators.base import inner, norm
 from recon.operators.encoding import Encoding
 from recon.operators.wavelet import Wavelet
+from recon.penalties import nuclear_norm, project_spectral
 
-#: dual steps for each proximal map; two were the cheapest on heads of two scanners (three: as many iterations).
+#: dual steps for each proximal map to begin with; two were the cheapest on simulated scans of two heads.
 DUAL_STEPS: Final = 2
-#: step of the dual gradient, just below its limit of 2 / ||D||^2.
-DUAL_STEP: Final = 1.9 / Differences.BOUND
+#: one step more whenever the optimality has not fallen by a fifth in this many iterations; and no more than so many.
+PATIENCE: Final = 10
+MOST_DUAL_STEPS: Final = 16
+#: step of the dual gradient as a fraction of 1 / ||K||^2, K being all operators inside the dual terms; 2 is its limit.
+DUAL_STEP: Final = 1.9
 
 StopReason = Literal["optimal", "iteration-limit", "nothing-to-solve"]
 
@@ -45,8 +52,10 @@ class Problem:
     data : complex ndarray
         Whitened samples in the range of `encoding` (see `Encoding.to_range`).
     wavelet : str
-    wavelet_strength, tv_strength : float
-        lambda_w and lambda_t, in noise units.
+    wavelet_strength, tv_strength, temporal_strength, low_rank_strength : float
+        lambda_w, lambda_t, lambda_f and lambda_r, in noise units; the last two for a series alone.
+    weights : (float, float, float)
+        Weights of the differences along slabs, rows and columns: for a volume whose voxels are not cubes.
     """
 
     encoding: Encoding
@@ -54,6 +63,9 @@ class Problem:
     wavelet: str
     wavelet_strength: float
     tv_strength: float
+    temporal_strength: float = 0.0
+    low_rank_strength: float = 0.0
+    weights: tuple[float, float, float] = (1.0, 1.0, 1.0)
 
 
 @dataclass(frozen=True)
@@ -62,9 +74,9 @@ class Solution:
 
     Attributes
     ----------
-    image : complex ndarray (rows, columns)
+    image : complex ndarray
         u, in noise units.
-    padded, dual : ndarray
+    padded, dual, low_rank_dual : ndarray
         Full primal and dual state, for warm starts.
     objective : list of float
         Objective after each iteration.
@@ -77,6 +89,7 @@ class Solution:
     image: NDArray[Any]
     padded: NDArray[Any]
     dual: NDArray[Any]
+    low_rank_dual: NDArray[Any] | None
     objective: list[float] = field(repr=False)
     optimality: float
     iterations: int
@@ -95,11 +108,11 @@ def solve(
 
     Stops when the relative optimality residual falls below `tolerance`:
 
-        max( ||g(x) + s|| / ||E^H d||,  (lambda_t TV(x) - Re <p, D x>) / objective ) < tolerance
+        max( ||g(x) + s|| / ||E^H d||,  (h(K x) - Re <p, K x>) / objective ) < tolerance
 
-    g is the gradient of the data term, s the subgradient of the penalties that the proximal map supplies, and p the
-    dual field of the TV term. The first says how far s is from cancelling g; the second, never negative, how far p is
-    from being a subgradient of TV at x. Both are zero exactly at the minimiser.
+    g is the gradient of the data term, s the subgradient of the penalties that the proximal map supplies, h(K x) all
+    penalties but the wavelet's and p their dual field. The first says how far s is from cancelling g; the second, never
+    negative, how far p is from being a subgradient of h at K x. Both are zero exactly at the minimiser.
 
     Parameters
     ----------
@@ -136,28 +149,51 @@ class _Iteration:
     def __init__(self, problem: Problem, start: Solution | None) -> None:
         encoding = problem.encoding
         self.encoding = encoding
-        rows, columns = encoding.domain_shape
-        self.transform = Wavelet((rows, columns), problem.wavelet)
+        self.problem = problem
+        self.shape = encoding.domain_shape
+        is_volume = encoding.depth == "volume"
+        self.transform = Wavelet(self.shape, problem.wavelet, along_slabs=is_volume)
         self.wavelet_strength = problem.wavelet_strength if self.transform.levels > 0 else 0.0
-        self.tv_strength = problem.tv_strength
-        self.shape = (rows, columns)
         self.padded_shape = self.transform.domain_shape if self.wavelet_strength > 0 else self.shape
         self.window = tuple(slice(0, n) for n in self.shape)
 
         self.b = self._embed(encoding.adjoint(problem.data))
         self.real = self.b.real.dtype.type
-        self.weights = np.ones(3, self.real)
+        self._set_variation(is_volume)
         self.data_energy = norm(problem.data) ** 2
         self.scale = norm(self.b)
         self.lipschitz = self.real(encoding.squared_norm_bound())
         self.x = np.zeros_like(self.b) if start is None else start.padded.copy()
-        self.p = np.zeros((2, *self.shape), self.b.dtype) if start is None else start.dual.copy()
+        axes = 3 if len(self.shape) == 3 and self.shape[0] > 1 else 2
+        self.p = np.zeros((axes, *self.shape), self.b.dtype) if start is None else start.dual.copy()
+        self.q = None
+        if problem.low_rank_strength > 0:
+            known = None if start is None else start.low_rank_dual
+            self.q = np.zeros(self.shape, self.b.dtype) if known is None else known.copy()
         self.hx = self._normal(self.x)
         self.x_before, self.hx_before = self.x, self.hx
         self.t = 1.0
+        self.dual_steps = DUAL_STEPS
+        self.best, self.since_best = np.inf, 0
         self.iterations = 0
         self.optimality = np.inf
         self.objective: list[float] = []
+
+    def _set_variation(self, is_volume: bool) -> None:
+        """Weights and radii of the dual field; a term of strength zero has weight zero, so its field stays zero."""
+        problem, slabs = self.problem, self.shape[0] if len(self.shape) == 3 else 1
+        inside = problem.tv_strength
+        along = problem.tv_strength if is_volume else problem.temporal_strength
+        pairs = zip(problem.weights, (along, inside, inside), strict=True)
+        weights = [weight if strength > 0 else 0.0 for weight, strength in pairs]
+        if slabs == 1:
+            weights[0] = 0.0
+        self.is_joint = is_volume
+        self.weights = np.array(weights, self.real)
+        self.radius, self.slab_radius = self.real(inside or 1.0), self.real(along or 1.0)
+        squared_norm = 4 * sum(weight**2 for weight in weights) + (1 if problem.low_rank_strength > 0 else 0)
+        self.has_dual = squared_norm > 0
+        self.dual_step = DUAL_STEP / squared_norm if self.has_dual else 0.0
 
     def step(self) -> None:
         """One accelerated proximal-gradient step with restart, and the optimality residual at its end."""
@@ -185,38 +221,61 @@ class _Iteration:
         objective = 0.5 * (quadratic + self.data_energy) - linear + penalty
         self.objective.append(objective)
         tiny = np.finfo(np.float64).tiny
-        self.optimality = max(np.sqrt(stationarity) / self.scale, gap / max(objective, tiny))
+        stationarity, gap = np.sqrt(stationarity) / self.scale, gap / max(objective, tiny)
+        self.optimality = max(stationarity, gap)
+        # an inexact proximal map stalls the acceleration in the end: make it more exact when that happens
+        self.since_best += 1
+        if self.optimality < 0.8 * self.best:
+            self.best, self.since_best = self.optimality, 0
+        elif self.since_best >= PATIENCE:
+            self.dual_steps, self.since_best = min(self.dual_steps + 1, MOST_DUAL_STEPS), 0
         self.x_before, self.hx_before, self.x, self.hx, self.t = self.x, self.hx, x, hx, t_next
         self.iterations += 1
 
     def _prox(self, v: NDArray[Any]) -> tuple[NDArray[Any], float, float]:
         """Proximal map of both penalties with step 1/L; also the TV term's duality gap and the penalties' value."""
         x = np.empty_like(v)
-        if self.tv_strength == 0:
+        if not self.has_dual:
             x[...] = v
             return x, 0.0, self._prox_wavelet(x)
-        # the dual field is kept free of the step: |p| <= lambda_t, and enters as p / L
-        p, inverse, radius = _deep(self.p), self.real(1 / self.lipschitz), self.real(self.tv_strength)
-        sigma, none = self.real(DUAL_STEP * self.lipschitz), self.real(0)
-        for _ in range(DUAL_STEPS):
-            kernels.subtract_divergence(_deep(v), p, inverse, self.weights, _deep(x))
+        # the dual fields are kept free of the step: they are bounded by the strengths, and enter divided by L
+        p, sigma = _deep_field(self.p), self.real(self.dual_step * self.lipschitz)
+        for _ in range(self.dual_steps):
+            self._minus_dual(v, x)
             self._prox_wavelet(x)
-            kernels.ascend_dual(p, _deep(x), sigma, self.weights, radius, none, True)
-        kernels.subtract_divergence(_deep(v), p, inverse, self.weights, _deep(x))
-        wavelet_cost = self._prox_wavelet(x)
-        variation, _, product = kernels.variation_sums(p, _deep(x), self.weights, True)
-        tv_cost = self.tv_strength * variation
-        return x, tv_cost - product, wavelet_cost + tv_cost
+            kernels.ascend_dual(
+                p, _deep(x), sigma, self.weights, self.radius, self.slab_radius, self.is_joint
+            )
+            if self.q is not None:
+                self.q = project_spectral(self.q + sigma * x[self.window], self.problem.low_rank_strength)
+        self._minus_dual(v, x)
+        cost = self._prox_wavelet(x)
+        inside, along, product = kernels.variation_sums(p, _deep(x), self.weights, self.is_joint)
+        penalty = float(self.radius) * inside + float(self.slab_radius) * along
+        if self.q is not None:
+            penalty += self.problem.low_rank_strength * nuclear_norm(x[self.window])
+            product += inner(self.q, np.ascontiguousarray(x[self.window])).real
+        return x, penalty - product, cost + penalty
+
+    def _minus_dual(self, v: NDArray[Any], out: NDArray[Any]) -> None:
+        """out = v - K^H (p, q) / L."""
+        inverse = self.real(1 / self.lipschitz)
+        kernels.subtract_divergence(_deep(v), _deep_field(self.p), inverse, self.weights, _deep(out))
+        if self.q is not None:
+            out[self.window] -= inverse * self.q
 
     def _prox_wavelet(self, x: NDArray[Any]) -> float:
         """Exact proximal map of the wavelet term with step 1/L, in place; returns its value."""
         if self.wavelet_strength == 0:
             return 0.0
         real, (low, high) = _deep(x), self.transform.filters(self.b.dtype)
-        rows, columns = self.transform.approximation_shape
-        kernels.analyse(real, low, high, self.transform.levels)
-        size = kernels.shrink(real, self.real(self.wavelet_strength / self.lipschitz), (1, rows, columns))
-        kernels.synthesise(real, low, high, self.transform.levels)
+        slabs, rows, columns = (1, *self.transform.approximation_shape)[-3:]
+        if self.encoding.depth == "series":
+            slabs = len(real)  # each frame has its own approximation
+        levels = self.transform.levels, self.transform.slab_levels
+        kernels.analyse(real, low, high, *levels)
+        size = kernels.shrink(real, self.real(self.wavelet_strength / self.lipschitz), (slabs, rows, columns))
+        kernels.synthesise(real, low, high, *levels)
         return self.wavelet_strength * size
 
     def _normal(self, x: NDArray[Any]) -> NDArray[Any]:
@@ -235,6 +294,7 @@ class _Iteration:
             image=self.x[self.window].copy(),
             padded=self.x,
             dual=self.p,
+            low_rank_dual=self.q,
             objective=self.objective,
             optimality=0.0 if reason == "nothing-to-solve" else float(self.optimality),
             iterations=self.iterations,
@@ -248,5 +308,12 @@ def _flat(x: NDArray[Any]) -> NDArray[Any]:
 
 
 def _deep(x: NDArray[Any]) -> NDArray[Any]:
-    """A plane, or a field of planes, as real numbers with a slab axis before the rows."""
-    return x.view(x.real.dtype)[..., np.newaxis, :, :]
+    """A plane or a volume as real numbers with three axes."""
+    real = x.view(x.real.dtype)
+    return real if real.ndim == 3 else real[np.newaxis]
+
+
+def _deep_field(p: NDArray[Any]) -> NDArray[Any]:
+    """A field of planes or volumes as real numbers with four axes."""
+    real = p.view(p.real.dtype)
+    return real if real.ndim == 4 else real[:, np.newaxis]

@@ -12,11 +12,14 @@ from recon.settings import Settings
 #: lambda_w and lambda_t where the noise is known.
 WAVELET_AUTO: Final = 0.08
 TV_AUTO: Final = 0.09
+#: lambda_f, between the frames of a series, where the noise is known.
+TEMPORAL_AUTO: Final = 0.2
 #: weight of 1/2 ||u||^2 where the noise is known.
 TIKHONOV_AUTO: Final = 0.03
 #: fractions of max |u| of the zero-filled image where the scan is free of noise.
 WAVELET_NOISE_FREE: Final = 3e-4
 TV_NOISE_FREE: Final = 3e-4
+TEMPORAL_NOISE_FREE: Final = 3e-4
 TIKHONOV_NOISE_FREE: Final = 1e-4
 
 
@@ -33,10 +36,16 @@ def resolve_strengths(settings: Settings, *, has_noise_units: bool) -> Settings:
     -------
     Settings
     """
-    known = {"wavelet_strength": WAVELET_AUTO, "tv_strength": TV_AUTO, "tikhonov_strength": TIKHONOV_AUTO}
+    known = {
+        "wavelet_strength": WAVELET_AUTO,
+        "tv_strength": TV_AUTO,
+        "temporal_strength": TEMPORAL_AUTO,
+        "tikhonov_strength": TIKHONOV_AUTO,
+    }
     noise_free = {
         "wavelet_strength": WAVELET_NOISE_FREE,
         "tv_strength": TV_NOISE_FREE,
+        "temporal_strength": TEMPORAL_NOISE_FREE,
         "tikhonov_strength": TIKHONOV_NOISE_FREE,
     }
     values = known if has_noise_units else noise_free

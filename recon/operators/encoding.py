@@ -2,16 +2,17 @@
 
     E u = P F (S_c u),  c = 1 ... C
 
-Where all maps are zero (outside the object) the data say nothing; there the image is measured once as zero with unit
-noise, like one more coil that sees the outside alone. That keeps the problem well posed without a hard edge.
+for a plane, a series of planes that share maps (2-D + time), or a volume. Where all maps are zero (outside the object)
+the data say nothing; there the image is measured once as zero with unit noise, like one more coil that sees the outside
+alone. That keeps the problem well posed without a hard edge.
 
-Where every sampled row is complete (1-D undersampling along the rows axis) the transform along the columns leaves the
-iteration: data are transformed along the columns once, and F acts along the rows alone.
+Where every readout is complete, the transform along the columns leaves the iteration: data are transformed along the
+columns once, and F acts along the other axes alone.
 """
 
 from __future__ import annotations
 
-from typing import Any
+from typing import Any, Literal
 
 import numpy as np
 import scipy.fft
@@ -21,52 +22,56 @@ from recon import kernels
 from recon.operators.base import LinearOperator
 from recon.operators.fourier import inverse_transform, transform
 
-
-def transform_axes(mask: NDArray[np.bool_]) -> tuple[int, ...]:
-    """Axes whose transform has to stay in the iteration: rows alone when the mask is constant along columns."""
-    is_constant = bool((mask == mask[:, :1]).all())
-    return (-2,) if is_constant else (-2, -1)
+#: what the first of three image axes is: frames are transformed one by one, the slabs of a volume together.
+Depth = Literal["series", "volume"]
 
 
 class Encoding(LinearOperator):
-    """E for one plane.
+    """E for a plane, a series or a volume.
 
     Parameters
     ----------
-    maps : complex64 (coil, rows, columns)
-        Whitened coil maps in noise units.
-    mask : bool (rows, columns)
+    maps : complex (coil, rows, columns) or (coil, slabs, rows, columns)
+        Whitened coil maps in noise units. Four axes for a series (one slab serves every frame) or a volume.
+    mask : bool (rows, columns) or (slabs, rows, columns)
         True where sampled.
+    depth : {"series", "volume"}
+        Meaning of the slab axis, where there is one.
 
     Attributes
     ----------
     axes : tuple of int
-        Transformed axes; the range is hybrid space (columns in image space) when this is (-2,).
+        Transformed axes; without -1 the range is hybrid space (columns in image space).
     """
 
-    def __init__(self, maps: NDArray[Any], mask: NDArray[np.bool_]) -> None:
+    def __init__(self, maps: NDArray[Any], mask: NDArray[np.bool_], depth: Depth = "volume") -> None:
         self.maps = np.ascontiguousarray(maps)
-        self.axes = transform_axes(mask)
-        self.domain_shape = maps.shape[1:]
-        self.range_shape = maps.shape
-        self._mask = mask[:, :1] if self.axes == (-2,) else mask
+        is_plane = maps.ndim == 3
+        self.depth: Depth = "series" if is_plane else depth
+        has_complete_readouts = bool((mask == mask[..., :1]).all())
+        self.axes = (
+            *((-3,) if self.depth == "volume" else ()), -2, *(() if has_complete_readouts else (-1,))
+        )  # fmt: skip
+        self.domain_shape = maps.shape[1:] if is_plane else mask.shape
+        self.range_shape = (len(maps), *self.domain_shape)
+        self._mask = mask[..., :1] if has_complete_readouts else mask
         # A shift of the image multiplies k-space by a phase, which the mask leaves alone: so the normal operator
         # needs no shifts of the image, only the mask in the order of the plain FFT.
-        self._plain_mask = np.ascontiguousarray(np.fft.ifftshift(self._mask, axes=self.axes)).astype(
-            maps.real.dtype
-        )
-        self._conjugate_maps = maps.conj()
+        real = maps.real.dtype
+        plain = np.fft.ifftshift(self._mask, axes=self.axes).astype(real)
+        self._plain_mask = np.ascontiguousarray(plain if not is_plane else plain[np.newaxis])
+        self._deep_maps = self.maps[:, np.newaxis] if is_plane else self.maps
         outside = ~np.any(maps != 0, axis=0)
-        self._outside = outside.astype(maps.real.dtype) if outside.any() else None
+        self._outside = np.broadcast_to(outside, self.domain_shape).astype(real) if outside.any() else None
 
     def to_range(self, kspace: NDArray[Any]) -> NDArray[Any]:
-        """Masked k-space (coil, rows, columns) in the space that `forward` maps to."""
-        data = kspace if len(self.axes) == 2 else inverse_transform(kspace, (-1,))
+        """Masked k-space, coil first, in the space that `forward` maps to."""
+        data = kspace if -1 in self.axes else inverse_transform(kspace, (-1,))
         return np.where(self._mask, data, 0)
 
     def to_kspace(self, data: NDArray[Any]) -> NDArray[Any]:
-        """The inverse of `to_range`: k-space (coil, rows, columns)."""
-        return data if len(self.axes) == 2 else transform(data, (-1,))
+        """The inverse of `to_range`: k-space, coil first."""
+        return data if -1 in self.axes else transform(data, (-1,))
 
     def forward(self, x: NDArray[Any]) -> NDArray[Any]:
         """Image to sampled data, zero where not sampled."""
@@ -74,25 +79,45 @@ class Encoding(LinearOperator):
 
     def adjoint(self, y: NDArray[Any]) -> NDArray[Any]:
         """Sampled data to image."""
-        images = inverse_transform(y * self._mask, self.axes)
-        images *= self._conjugate_maps
-        return np.asarray(images.sum(axis=0, dtype=images.dtype))
+        out = np.zeros(self.domain_shape, y.dtype)
+        for map_, samples in zip(self.maps, y, strict=True):
+            image = inverse_transform(samples * self._mask, self.axes)
+            image *= map_.conj()
+            out += image
+        return out
 
     def normal(self, x: NDArray[Any]) -> NDArray[Any]:
         """E^H E x plus x outside the object, coil by coil so that each coil's plane stays in the cache."""
         x = np.ascontiguousarray(x)
         out = np.zeros_like(x) if self._outside is None else self._outside * x
-        plane = np.empty_like(x)
-        flat, sums, real = x.reshape(-1), out.reshape(-1), x.real.dtype
-        for map_ in self.maps.reshape(len(self.maps), -1):
-            kernels.weigh(map_.view(real), flat.view(real), plane.reshape(-1).view(real))
-            spectrum = scipy.fft.fftn(plane, axes=self.axes, overwrite_x=True)
-            spectrum *= self._plain_mask
-            image = scipy.fft.ifftn(spectrum, axes=self.axes, overwrite_x=True)
-            kernels.add_conjugate(map_.view(real), image.reshape(-1).view(real), sums.view(real))
+        deep = x.reshape(-1, *x.shape[-2:])
+        sums = out.reshape(deep.shape)
+        if self.depth == "volume":
+            for map_ in self._deep_maps:
+                self._add_coil(map_, deep, self._plain_mask, sums)
+            return out
+        masks = np.broadcast_to(self._plain_mask, (len(deep), *self._plain_mask.shape[1:]))
+        for frame, mask, total in zip(deep, masks, sums, strict=True):
+            for map_ in self._deep_maps:
+                self._add_coil(map_[0], frame, mask, total)
         return out
+
+    def _add_coil(self, map_: NDArray[Any], x: NDArray[Any], mask: NDArray[Any], out: NDArray[Any]) -> None:
+        """out += S^H F^H P F S x for one coil."""
+        weighted = np.empty_like(x)
+        kernels.weigh(_real(map_), _real(x), _real(weighted))
+        spectrum = scipy.fft.fftn(weighted, axes=self.axes, overwrite_x=True)
+        spectrum *= mask
+        image = scipy.fft.ifftn(spectrum, axes=self.axes, overwrite_x=True)
+        kernels.add_conjugate(_real(map_), _real(image), _real(out))
 
     def squared_norm_bound(self) -> float:
         """Upper bound of ||E||^2, the outside included: max over pixels of sum_c |S_c|^2 (P and F have norm one)."""
-        largest = float(np.max(np.sum(np.abs(self.maps) ** 2, axis=0, dtype=np.float64)))
+        power = sum(np.abs(map_).astype(np.float64) ** 2 for map_ in self.maps)
+        largest = float(np.max(power))
         return largest if self._outside is None else max(largest, 1.0)
+
+
+def _real(x: NDArray[Any]) -> NDArray[Any]:
+    """All entries as real numbers in one row."""
+    return x.reshape(-1).view(x.real.dtype)

@@ -145,14 +145,14 @@ def test_wavelet_loops_equal_pywavelets(name: str, dtype: Any) -> None:
     x = complex_normal(np.random.default_rng(5), (2, 32, 40), dtype)
     low, high = (np.array(f, x.real.dtype) for f in (wavelet.dec_lo, wavelet.dec_hi))
     out = x.copy()
-    kernels.analyse(reals(out), low, high, 1)
+    kernels.analyse(reals(out), low, high, 1, 0)
     for slab, found in zip(x, out, strict=True):
         approximation, (horizontal, vertical, diagonal) = pywt.dwt2(slab, wavelet, mode="periodization")
         np.testing.assert_allclose(found[:16, :20], approximation, atol=10 * limit(dtype))
         np.testing.assert_allclose(found[16:, :20], horizontal, atol=10 * limit(dtype))
         np.testing.assert_allclose(found[:16, 20:], vertical, atol=10 * limit(dtype))
         np.testing.assert_allclose(found[16:, 20:], diagonal, atol=10 * limit(dtype))
-    kernels.synthesise(reals(out), low, high, 1)
+    kernels.synthesise(reals(out), low, high, 1, 0)
     np.testing.assert_allclose(out, x, atol=10 * limit(dtype))
 
 

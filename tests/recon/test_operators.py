@@ -85,14 +85,17 @@ def test_norm_bounds_against_the_singular_values() -> None:
             assert largest**2 <= bound * (1 + 1e-12), name
             assert bound < 3 * largest**2, name  # loose bounds would make the solver slow
         elif isinstance(operator, Differences):
-            assert largest**2 < operator.BOUND, name
+            assert largest**2 < operator.bound, name
         else:
             assert largest == pytest.approx(1, abs=1e-10), name
 
 
 def test_norm_bound_of_differences_is_tight() -> None:
     """Source: Chambolle 2004: ||D||^2 tends to 8 on large grids."""
-    assert np.linalg.svd(dense(Differences((20, 20))), compute_uv=False)[0] ** 2 > 0.98 * Differences.BOUND
+    assert (
+        np.linalg.svd(dense(Differences((20, 20))), compute_uv=False)[0] ** 2
+        > 0.98 * Differences((20, 20)).bound
+    )
 
 
 @pytest.mark.parametrize("name", [name for name in REGISTRY if name.startswith("encoding")])
