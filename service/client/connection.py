@@ -24,6 +24,8 @@ from service.settings import client_token, client_url
 #: The service looks through a scan before it answers; a large one takes longer.
 _CHECK_SECONDS = 120.0
 _CHECK_SECONDS_PER_GIB = 240.0
+#: A smaller scan is sent before anybody has seen the bar.
+SHOWN_FROM_BYTES = 16 << 20
 
 
 class Client:
@@ -93,7 +95,7 @@ class Client:
             A name of your own for scan and job.
         priority : {"routine", "urgent"}
         progress : bool
-            Show a progress bar on standard error while the scan is sent.
+            Show a progress bar on standard error while a large scan is sent.
 
         Returns
         -------
@@ -190,7 +192,8 @@ class Client:
         }
         params = {} if label is None else {"label": label}
         with ProgressLine() as line:
-            body = file_body(path, partial(line.update, "sending") if progress else None)
+            is_shown = progress and path.stat().st_size >= SHOWN_FROM_BYTES
+            body = file_body(path, partial(line.update, "sending") if is_shown else None)
             answer = self._transport.request(
                 "POST",
                 "/v1/scans",

@@ -20,6 +20,7 @@ from service.client import (
     ServiceFault,
     ServiceUnreachable,
     WaitTimedOut,
+    connection,
 )
 from tests.client.scripted import DROP, Received, Step, answer, refusal, scripted
 
@@ -56,8 +57,13 @@ def test_dropped_submission_is_repeated_with_the_same_key_and_whole_body(scan_fi
     assert len({order.body for order in orders}) == 1
 
 
-def test_sending_shows_its_progress(scan_file: Path, capsys: pytest.CaptureFixture[str]) -> None:
-    with scripted(answer(SCAN, 201)) as service, Client(service.url, "t") as client:
+def test_sending_a_large_scan_shows_its_progress(
+    scan_file: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    with scripted(answer(SCAN, 201), answer(SCAN, 200)) as service, Client(service.url, "t") as client:
+        client.upload(scan_file, progress=True)
+        assert capsys.readouterr().err == ""
+        monkeypatch.setattr(connection, "SHOWN_FROM_BYTES", 1 << 20)
         client.upload(scan_file, progress=True)
     assert capsys.readouterr().err.splitlines()[-1] == "100 %  sending"
 
