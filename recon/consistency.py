@@ -52,8 +52,8 @@ class ResidualFigures:
     shape : (rows, columns)
         Of a plane.
     whitening : Whitening
-        Its covariance was estimated from n samples of C coils, which inflates the statistic by n / (n - C); the
-        figures are corrected for that.
+        Made from n samples: its whitener carries the correction for that, and `by_coil`, which divides by each coil's
+        estimated variance instead, is corrected by (n - 1) / n.
     sizes : dict
         Lengths of the scan's outer axes.
     """
@@ -61,8 +61,7 @@ class ResidualFigures:
     def __init__(self, shape: tuple[int, int], whitening: Whitening, sizes: dict[str, int]) -> None:
         self.whitening = whitening
         coils = len(whitening.covariance)
-        samples = whitening.samples
-        self.correction = (samples - coils) / samples if samples > coils else 1.0
+        self.coil_correction = (whitening.samples - 1) / whitening.samples if whitening.samples > 1 else 1.0
         radius = np.hypot(*(_normalised_distance(n, axis) for axis, n in enumerate(shape)))
         self.ring = np.minimum((radius / RING_WIDTH + 1e-9).astype(int), int(np.sqrt(2) / RING_WIDTH))
         self.rings = int(self.ring.max()) + 1
@@ -100,24 +99,25 @@ class ResidualFigures:
             {
                 "from": round(ring * RING_WIDTH, 6),
                 "to": round((ring + 1) * RING_WIDTH, 6),
-                "value": self.correction * float(self.by_ring[0, ring] / self.by_ring[1, ring]),
+                "value": float(self.by_ring[0, ring] / self.by_ring[1, ring]),
                 "samples": int(self.by_ring[1, ring]),
             }
             for ring in range(self.rings)
             if self.by_ring[1, ring] > 0
         ]
         figures: dict[str, Any] = {
-            "value": self.correction * float(self.total[0] / self.total[1]),
+            "value": float(self.total[0] / self.total[1]),
             "samples": int(self.total[1]),
-            "by_coil": self._ratios(self.by_coil),
+            "by_coil": _ratios(self.by_coil, self.coil_correction),
             "by_ring": rings,
         }
         for axis, sums in self.by_outer.items():
-            figures[f"by_{axis}"] = self._ratios(sums)
+            figures[f"by_{axis}"] = _ratios(sums)
         return {"reduced_chi_squared": figures, "relative_residual": relative}
 
-    def _ratios(self, sums: NDArray[Any]) -> list[float | None]:
-        return [self.correction * float(a / b) if b > 0 else None for a, b in sums.T]
+
+def _ratios(sums: NDArray[Any], correction: float = 1.0) -> list[float | None]:
+    return [correction * float(a / b) if b > 0 else None for a, b in sums.T]
 
 
 def _normalised_distance(n: int, axis: int) -> NDArray[np.float64]:

@@ -5,22 +5,25 @@ The facts are plain JSON, so that the service can store them and judge a job's s
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Callable
 from dataclasses import dataclass, field
 from typing import Any, Final
 
 import numpy as np
 from numpy.typing import NDArray
 
+from recon.axes import LabelledArray
 from recon.caution import CAUTION
-from recon.coils.calibration import SMALLEST_BLOCK, check_block
-from recon.errors import InvalidScan, InvalidSettings
+from recon.coils.calibration import SMALLEST_BLOCK
+from recon.errors import InvalidScan
 from recon.findings import Finding
 from recon.formats.image_layout import voxel_size_mm
 from recon.sampling import SamplingFacts, readout_finding
-from recon.scan import PlaneIndex, Scan, cropped_readout
-from recon.settings import Settings
+from recon.scan import PlaneIndex, Scan, cropped_readout, readout_pattern
 
+#: magnitudes of k-space that single-precision arithmetic can square without harm.
+SMALLEST_VALUE: Final = 1e-15
+LARGEST_VALUE: Final = 1e15
 #: a calibration region below this side gives coarse maps.
 COMFORTABLE_BLOCK: Final = 16
 
@@ -35,9 +38,10 @@ class Inspection:
         Length of every k-space axis.
     sampling : dict
         `sampled_fraction`, `net_acceleration`, `nominal_acceleration`, `calibration` (rows, columns),
-        `peak_side_lobe`, `masks` (distinct ones), `varies_along_readout`.
+        `peak_side_lobe`, `distinct_masks`, `varies_along_readout` (or along the columns of a phase-phase plane).
     objects : dict
-        Which of the optional objects the scan has; the size of `/reference`.
+        Which of the optional objects the scan has; rows and columns of `/reference` and `/sensitivity`, those of the
+        reference without readout oversampling where the scan is solved without it.
     findings : list of Finding
     """
 
@@ -115,8 +119,17 @@ class Inspector:
         scan = self.scan
         if self.largest == 0.0:
             raise InvalidScan("/kspace holds only zeros; write the measured samples")
-        reference = None if scan.reference_array is None else scan.reference_array.sizes
+        if not SMALLEST_VALUE <= self.largest <= LARGEST_VALUE:
+            raise InvalidScan(
+                f"the largest value of /kspace is {self.largest:.1e}; accepted is {SMALLEST_VALUE:g} to "
+                f"{LARGEST_VALUE:g}: multiply /kspace and /noise by one factor that brings it near 1"
+            )
         rows, columns = scan.plane_shape[0], cropped_readout(scan)
+        encoded = scan.plane_shape[1]
+        solved = encoded if self.sampling.varies_along_columns else columns
+        reference = _matrix(scan.reference_array, scan.plane_axes)
+        if reference is not None:
+            reference[1] = max(1, round(reference[1] * solved / encoded))
         voxel = voxel_size_mm(scan, (rows, columns))
         return Inspection(
             axes=scan.axes,
@@ -124,8 +137,8 @@ class Inspector:
             objects={
                 "noise": scan.noise_array is not None,
                 "mask": scan.mask_array is not None,
-                "sensitivity": scan.sensitivity_array is not None,
-                "reference": None if reference is None else [reference[axis] for axis in scan.plane_axes],
+                "sensitivity": _matrix(scan.sensitivity_array, scan.image_axes[-2:]),
+                "reference": reference,
             },
             image={
                 "axes": list(scan.image_axes),
@@ -211,10 +224,12 @@ class Inspector:
 
 
 def _along_readout(holds: NDArray[np.bool_], scan: Scan) -> NDArray[np.bool_]:
-    # zeros inside a measured readout are values; only a readout that is zero throughout was not written
-    if scan.plane_axes[1] != "kx":
-        return holds
-    return np.broadcast_to(holds.any(axis=1, keepdims=True), holds.shape)
+    # zeros inside a measured readout are values; a readout, or a column of all of them, that is zero throughout is not
+    return holds if scan.plane_axes[1] != "kx" else readout_pattern(holds)
+
+
+def _matrix(array: LabelledArray | None, axes: tuple[str, ...]) -> list[int] | None:
+    return None if array is None else [array.sizes[axis] for axis in axes]
 
 
 def _where(scan: Scan, index: PlaneIndex) -> str:
@@ -247,71 +262,22 @@ def inspect(scan: Scan, progress: Callable[[float], None] | None = None) -> Insp
         inspector.see(index, kspace, scan.mask(index, kspace))
         if progress is not None:
             progress(done / len(planes))
-    for name, array in (
-        ("/noise", scan.noise_array),
-        ("/reference", scan.reference_array),
-        ("/sensitivity", scan.sensitivity_array),
-    ):
-        for position in range(
-            scan.axes.get("slice", 1) if array is not None and "slice" in array.axes else 1
-        ):
-            if array is not None and not np.isfinite(array.take(slice=position).view(np.float32)).all():
-                raise InvalidScan(
-                    f"{name} contains NaN or Inf; write finite numbers in single-precision range"
-                )
+    check_finite(scan)
     return inspector.finish()
 
 
-def check_job(facts: Mapping[str, Any], settings: Settings) -> None:
-    """Refuse settings that cannot work with a scan, before any time is spent on it.
-
-    Parameters
-    ----------
-    facts : mapping
-        `Inspection.as_dict()` of the scan.
-    settings : Settings
-
-    Raises
-    ------
-    CalibrationMissing
-        When the settings need coil maps and there is nothing to compute them from.
-    InvalidSettings
-        For more virtual coils than coils, or supplied maps that are not there.
-    """
-    coils = int(facts["axes"].get("coil", 1))
-    rule = settings.coil_compression
-    wanted = getattr(rule, "coils", None)
-    if wanted is not None and wanted > coils:
-        raise InvalidSettings(
-            [
-                {
-                    "pointer": "/coil_compression",
-                    "detail": f"received {wanted} coils for a scan with {coils}; accepted is up to that",
-                }
-            ]
-        )
-    has_maps = bool(facts["objects"]["sensitivity"])
-    if settings.coil_maps == "supplied" and not has_maps:
-        raise InvalidSettings(
-            [
-                {
-                    "pointer": "/coil_maps",
-                    "detail": "received supplied, but the scan has no /sensitivity; add maps or choose eigenvector",
-                }
-            ]
-        )
-    if not needs_maps(settings, coils) or (has_maps and settings.coil_maps in ("auto", "supplied")):
-        return
-    matrix = tuple(facts["image"]["matrix"])
-    if facts["objects"]["reference"] is not None:
-        rows, columns = facts["objects"]["reference"]
-        check_block(rows, columns, (matrix[0], matrix[1]), "/reference")
-    else:
-        rows, columns = (facts["sampling"]["calibration"][side] for side in ("rows", "columns"))
-        check_block(rows, columns, (matrix[0], matrix[1]), "the scan")
-
-
-def needs_maps(settings: Settings, coils: int) -> bool:
-    """Whether a reconstruction with these settings uses coil maps at all."""
-    is_coilwise = settings.method == "zero-filled" and settings.combination == "root-sum-of-squares"
-    return coils > 1 and not is_coilwise
+def check_finite(scan: Scan) -> None:
+    """Raise `InvalidScan` when `/noise`, `/reference` or `/sensitivity` holds NaN or Inf (`see` looks at `/kspace`)."""
+    others = {
+        "/noise": scan.noise_array,
+        "/reference": scan.reference_array,
+        "/sensitivity": scan.sensitivity_array,
+    }
+    for name, array in others.items():
+        if array is None:
+            continue
+        for position in range(array.sizes.get("slice", 1)):
+            if not np.isfinite(array.take(slice=position).view(np.float32)).all():
+                raise InvalidScan(
+                    f"{name} contains NaN or Inf; write finite numbers in single-precision range"
+                )

@@ -1,4 +1,7 @@
-"""The table of penalties: value and proximal map of each.
+"""Value and proximal map of each penalty, in plain NumPy.
+
+The compiled loops of `recon.kernels` do the same inside the solver; these say it readably and are what the tests
+compare those with. The nuclear norm is used as it stands.
 
 A proximal map `prox(v, step)` minimises 1/2 ||x - v||^2 + step f(x), the weight of the penalty being inside f.
 """

@@ -3,7 +3,7 @@
     read -> inspect -> whiten -> crop readout oversampling -> compress coils -> coil maps -> solve -> combine
     -> consistency -> write
 
-Memory does not grow with the number of planes: one (or one series of frames that are tied together) is read, solved,
+Memory hardly grows with the number of planes: one (or one series of frames that are tied together) is read, solved,
 judged and written before the next.
 """
 
@@ -19,6 +19,7 @@ from numpy.typing import NDArray
 
 from recon.coils.maps import CoilMaps
 from recon.consistency import ResidualFigures
+from recon.errors import InvalidScan
 from recon.formats import ImageWriter, open_scan
 from recon.plane import reconstruct_together
 from recon.preparation import Preparation, prepare
@@ -74,7 +75,7 @@ def reconstruct(
 
     For every plane, with S the coil maps, P the mask, F the centred unitary transform, u = kappa m in noise units:
 
-        minimise 1/2 sum_c ||P F S_c u - y_c||^2 + lambda_w ||W u||_1 + lambda_t TV(u)
+        minimise 1/2 sum_c ||P F S_c u - y_c||^2 + 1/2 ||u outside the maps||^2 + lambda_w ||W u||_1 + lambda_t TV(u)
 
     Parameters
     ----------
@@ -130,6 +131,8 @@ def reconstruct_file(
     dict
         The report, which is in the image file too.
     """
+    if Path(image_path).exists() and Path(image_path).samefile(scan_path):
+        raise InvalidScan(f"the image would overwrite the scan {Path(scan_path).name}; give it another path")
     tell = _Teller(progress)
     with open_scan(scan_path) as scan:
         preparation = prepare(scan, settings or Settings(), tell.preparing)
@@ -148,6 +151,7 @@ def _run(
     residuals = ResidualFigures(preparation.shape, preparation.whitening, scan.axes)
     solver = SolverFigures()
     groups = preparation.groups()
+    shares: dict[int, float] = {}
     maps: CoilMaps | None = None
     current: int | None = None
     for done, group in enumerate(groups):
@@ -156,18 +160,20 @@ def _run(
         if position != current and preparation.map_method is not None:
             tell("coil-maps")
             maps = preparation.map_maker().make(position, preparation.whitened_blocks(position))
+            shares[position] = maps.object_share
         current = position
         planes = [preparation.load(index) for index in group]
         tell("solve")
         results = reconstruct_together(preparation, maps, planes, tell.iteration(preparation.settings))
         solver.see(group, results[0].solution)
+        tell("combine")
         for index, (kspace, mask), result in zip(group, planes, results, strict=True):
             tell("consistency")
             residuals.see(index, result.residuals, kspace, mask)
             tell("write")
             sink.write("image", index, result.image)
             sink.write("residual_image", index, result.residual_image)
-    return build_report(preparation, residuals, solver, provenance)
+    return build_report(preparation, residuals, solver, shares, provenance)
 
 
 class _Teller:

@@ -13,7 +13,9 @@ from recon.coils.calibration import LARGEST_BLOCK, calibration_block, check_bloc
 from recon.coils.compression import Compression
 from recon.coils.maps import MapMaker, MapMethod, squared_gain
 from recon.coils.noise import Whitening, estimate_whitening
-from recon.inspection import Inspection, Inspector, check_job, needs_maps
+from recon.errors import InvalidScan
+from recon.feasibility import check_job, needs_maps
+from recon.inspection import Inspection, Inspector, check_finite
 from recon.operators.fourier import crop_readout
 from recon.scan import PlaneIndex, Scan, cropped_readout
 from recon.settings import Settings
@@ -32,7 +34,7 @@ class Preparation:
     Attributes
     ----------
     settings : Settings
-        As resolved: no strength or map method is `auto` any more.
+        As resolved: no strength is `auto` any more, nor the map method where maps are made.
     shape : (rows, columns)
         Of a plane as it is solved; `image_columns` of them are kept.
     kappa : float
@@ -116,20 +118,22 @@ def prepare(scan: Scan, settings: Settings, report: Report) -> Preparation:
         For settings that do not fit the scan.
     """
     method = _map_method(scan, settings)
-    inspection, blocks = _read(scan, method, report)
+    shape = _solved_shape(scan)
+    inspection, blocks = _read(scan, shape, method, report)
     check_job(inspection.as_dict(), settings)
+    check_finite(scan)
     report("whiten", 0.0)
     whitening = estimate_whitening(scan)
     resolved = resolve_strengths(settings, has_noise_units=whitening.has_noise_units)
     report("crop", 0.0)
-    shape = _solved_shape(scan)
     report("compress", 0.0)
     gram = np.zeros((scan.coils, scan.coils), np.complex128)
     for block in (block for of_slice in blocks.values() for block in of_slice):
         samples = whitening.apply(block).reshape(scan.coils, -1).astype(np.complex128)
         gram += samples @ samples.conj().T / samples.shape[1]
     gram /= sum(len(of_slice) for of_slice in blocks.values())
-    rule = None if method == "single-coil" else resolved.coil_compression
+    # one coil has nothing to compress, and images coil by coil use all of them
+    rule = None if method in (None, "single-coil") or scan.coils == 1 else resolved.coil_compression
     compression = Compression(gram, rule, has_noise_units=whitening.has_noise_units)
     if method is not None:
         resolved = resolved.model_copy(
@@ -144,14 +148,23 @@ def prepare(scan: Scan, settings: Settings, report: Report) -> Preparation:
         map_method=method,
         shape=shape,
         image_columns=cropped_readout(scan),
-        kappa=_noise_units(whitening, compression, blocks),
+        kappa=float(
+            np.sqrt(
+                squared_gain(
+                    [block for of_slice in blocks.values() for block in of_slice], whitening, compression
+                )
+            )
+        ),
         blocks=blocks,
     )
 
 
 def _map_method(scan: Scan, settings: Settings) -> MapMethod | None:
+    if scan.coils == 1:
+        is_supplied = scan.sensitivity_array is not None and settings.coil_maps in ("auto", "supplied")
+        return "supplied" if is_supplied else "single-coil"
     if not needs_maps(settings, scan.coils):
-        return "single-coil" if scan.coils == 1 and scan.sensitivity_array is None else None
+        return None
     if settings.coil_maps == "auto":
         return "supplied" if scan.sensitivity_array is not None else "eigenvector"
     return settings.coil_maps
@@ -167,39 +180,45 @@ def _solved_shape(scan: Scan) -> tuple[int, int]:
     columns = cropped_readout(scan)
     if columns == encoded or scan.mask_array is None or "kx" not in scan.mask_array.axes:
         return rows, columns
-    masks = (scan.mask_array.take(**index._asdict()) for index in scan.planes())
+    outer = [axis for axis in scan.outer_axes if axis in scan.mask_array.axes]
+    # a mask without outer axes is the same for every plane and read once
+    indices = scan.planes() if outer else scan.planes()[:1]
+    masks = (scan.mask_array.take(**index._asdict()) for index in indices)
     is_complete = all((mask == mask[..., :1]).all() for mask in masks)
     return rows, columns if is_complete else encoded
 
 
 def _read(
-    scan: Scan, method: MapMethod | None, report: Report
+    scan: Scan, shape: tuple[int, int], method: MapMethod | None, report: Report
 ) -> tuple[Inspection, dict[int, list[NDArray[Any]]]]:
-    """The one pass over all data: facts, and each slice's calibration blocks."""
+    """One pass over all data: facts, and each slice's calibration blocks."""
     inspector = Inspector(scan)
     blocks: dict[int, list[NDArray[Any]]] = {}
     planes = scan.planes()
     shared = len(planes) // scan.axes.get("slice", 1)
     chosen = {round(step * shared / BLOCKS_PER_SLICE) for step in range(BLOCKS_PER_SLICE)} if shared else {0}
     for done, index in enumerate(planes):
-        report("read" if done == 0 else "inspect", done / len(planes))
+        report("read", done / len(planes))
         kspace = scan.kspace(index)
         mask = scan.mask(index, kspace)
+        report("inspect", done / len(planes))
         inspector.see(index, kspace, mask)
         if done % shared in chosen:
             of_slice = blocks.setdefault(index.slice, [])
+            needs_full = method in ("eigenvector", "adaptive")
             if scan.reference_array is None:
-                of_slice.append(
-                    _block(scan, kspace, mask, must_be_full=method in ("eigenvector", "adaptive"))
-                )
+                of_slice.append(_block(shape, kspace, mask, must_be_full=needs_full))
             elif not of_slice:
-                of_slice.append(_reference_block(scan, index.slice))
+                centre = _block(shape, kspace, mask, must_be_full=False)
+                of_slice.append(_reference_block(scan, shape, index.slice, centre))
     return inspector.finish(), blocks
 
 
-def _block(scan: Scan, kspace: NDArray[Any], mask: NDArray[np.bool_], *, must_be_full: bool) -> NDArray[Any]:
+def _block(
+    shape: tuple[int, int], kspace: NDArray[Any], mask: NDArray[np.bool_], *, must_be_full: bool
+) -> NDArray[Any]:
     """Raw central block of one plane, readout oversampling removed where readouts are complete."""
-    columns = _solved_shape(scan)[1]
+    columns = shape[1]
     if columns != mask.shape[1]:
         rows = min(2 * LARGEST_BLOCK, mask.shape[0])
         centre = crop_block(mask, rows, mask.shape[1])
@@ -212,23 +231,31 @@ def _block(scan: Scan, kspace: NDArray[Any], mask: NDArray[np.bool_], *, must_be
     return crop_block(kspace * mask, *sides)
 
 
-def _reference_block(scan: Scan, position: int) -> NDArray[Any]:
+def _reference_block(scan: Scan, shape: tuple[int, int], position: int, centre: NDArray[Any]) -> NDArray[Any]:
+    """Raw central block of `/reference`, brought to the scale of the scan.
+
+    A calibration measured separately may have another receiver gain; maps do not depend on it, but what counts as
+    signal does. The scale is that of the positions which the scan has sampled too.
+
+    Parameters
+    ----------
+    shape : (rows, columns)
+        Of a plane as it is solved.
+    centre : complex (coil, rows, columns)
+        Central block of the scan, zero where not sampled.
+    """
     reference = scan.reference(position)
     assert reference is not None
-    columns = scan.plane_shape[1] / cropped_readout(scan)
-    kept = max(1, round(reference.shape[2] / columns))
+    if not reference.any():
+        raise InvalidScan(
+            f"/reference of slice {position} is zero everywhere; write it as measured or leave it out"
+        )
+    kept = max(1, round(reference.shape[2] * shape[1] / scan.plane_shape[1]))
     cropped = crop_readout(reference, kept)
-    rows, kept = cropped.shape[1:]
-    check_block(rows, kept, (scan.plane_shape[0], cropped_readout(scan)), "/reference")
-    return crop_block(cropped, min(rows, LARGEST_BLOCK), min(kept, LARGEST_BLOCK))
-
-
-def _noise_units(
-    whitening: Whitening, compression: Compression, blocks: dict[int, list[NDArray[Any]]]
-) -> float:
-    """kappa: the square root of the mean over the object of S^H Psi^-1 S."""
-    total, count = 0.0, 0.0
-    for block in (block for of_slice in blocks.values() for block in of_slice):
-        part = squared_gain(whitening.apply(block), whitening, compression)
-        total, count = total + part[0], count + part[1]
-    return float(np.sqrt(total / count)) if count else 1.0
+    check_block(cropped.shape[1], kept, shape, "/reference")
+    block = crop_block(cropped, min(cropped.shape[1], LARGEST_BLOCK), min(kept, LARGEST_BLOCK))
+    sides = min(block.shape[1], centre.shape[1]), min(block.shape[2], centre.shape[2])
+    ours, theirs = crop_block(centre, *sides), crop_block(block, *sides)
+    theirs = theirs * np.any(ours != 0, axis=0)
+    scale = np.linalg.norm(ours) / np.linalg.norm(theirs) if theirs.any() else 1.0
+    return np.asarray(block * np.float32(scale), np.complex64)

@@ -6,6 +6,7 @@ from collections.abc import Mapping
 from typing import Any, Final
 
 from recon.caution import CAUTION
+from recon.coils.findings import map_findings, noise_findings
 from recon.consistency import ResidualFigures
 from recon.findings import Finding
 from recon.operators.wavelet import Wavelet
@@ -90,9 +91,15 @@ def build_report(
     preparation: Preparation,
     residuals: ResidualFigures,
     solver: SolverFigures,
+    map_shares: Mapping[int, float],
     provenance: Mapping[str, Any],
 ) -> dict[str, Any]:
     """Put the stages' figures together.
+
+    Parameters
+    ----------
+    map_shares : mapping
+        Share of the object inside the coil maps, by slice.
 
     Returns
     -------
@@ -101,7 +108,13 @@ def build_report(
         settings provenance`.
     """
     inspection = preparation.inspection
-    findings = [*inspection.findings, *solver.findings(preparation)]
+    scan = preparation.scan
+    findings = [
+        *inspection.findings,
+        *noise_findings(preparation.whitening, scan.noise_attributes, scan.attributes),
+        *map_findings(map_shares),
+        *solver.findings(preparation),
+    ]
     figures = residuals.as_dict()
     if preparation.map_method is None:
         figures = {"reduced_chi_squared": None, "relative_residual": None}

@@ -98,8 +98,8 @@ def readout_finding(facts: SamplingFacts, plane_axes: tuple[str, str]) -> list[F
             Finding(
                 "partial-echo",
                 "info",
-                "The mask leaves out one end of every readout (partial echo): resolution along x is lower than "
-                "the matrix says.",
+                "The mask leaves out part of every readout (partial echo): resolution along x is lower than the "
+                "matrix says.",
                 "/mask",
             )
         ]

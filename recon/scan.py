@@ -122,10 +122,6 @@ class Scan:
         every = (PlaneIndex(*index) for index in product(*(range(size) for size in sizes)))
         return sorted(every, key=lambda index: (index.slice, index.frame, index.contrast))
 
-    def planes_of_slice(self, position: int) -> list[PlaneIndex]:
-        """The frames and contrasts of one slice."""
-        return [index for index in self.planes() if index.slice == position]
-
     def kspace(self, index: PlaneIndex) -> NDArray[np.complex64]:
         """Read one plane: complex64 of shape (coil, rows, columns)."""
         part: NDArray[np.complex64] = self.kspace_array.take(**index._asdict())
@@ -134,14 +130,15 @@ class Scan:
     def mask(self, index: PlaneIndex, kspace: NDArray[np.complex64] | None = None) -> NDArray[np.bool_]:
         """Sampling mask of one plane, broadcast to (rows, columns).
 
-        Without `/mask` a position counts as sampled when any coil holds a value other than zero there; along a
-        readout (`kx`) the whole line is taken, since zeros inside a measured line are values, not gaps.
+        Without `/mask` a position counts as sampled when any coil holds a value other than zero there. Along a readout
+        (`kx`) zeros inside a measured line are values, not gaps: there a column is left out only where every line is
+        zero, as at the missing end of a partial echo.
         """
         if self.mask_array is None:
             data = self.kspace(index) if kspace is None else kspace
             sampled: NDArray[np.bool_] = np.any(data != 0, axis=0)
             if self.plane_axes[1] == "kx":
-                sampled = np.broadcast_to(sampled.any(axis=1, keepdims=True), sampled.shape)
+                sampled = readout_pattern(sampled)
             return sampled
         part = self.mask_array.take(**index._asdict())
         left = [axis for axis in self.mask_array.axes if axis not in OUTER_AXES]
@@ -165,6 +162,11 @@ class Scan:
         return _with_coil(self.sensitivity_array, self.sensitivity_array.take(slice=position))
 
 
+def readout_pattern(holds: NDArray[np.bool_]) -> NDArray[np.bool_]:
+    """Lines that hold anything, at the columns that hold anything: (rows, columns) as measured by whole readouts."""
+    return np.asarray(holds.any(axis=1, keepdims=True) & holds.any(axis=0, keepdims=True))
+
+
 def _with_coil(array: LabelledArray, part: NDArray[Any]) -> NDArray[Any]:
     return part if "coil" in array.axes else part[np.newaxis]
 
@@ -178,6 +180,8 @@ def validate(scan: Scan) -> None:
         Naming the object, what was received, what is accepted and what to do.
     """
     _check_kspace_axes(scan.kspace_array)
+    for name in ("kspace", "noise", "reference", "sensitivity"):
+        _check_numbers(f"/{name}", getattr(scan, f"{name}_array"))
     sizes = scan.axes
     plane, image = scan.plane_axes, tuple(image_axis(axis) for axis in scan.plane_axes)
     fixed: dict[str, int] = {axis: sizes[axis] for axis in sizes if axis in ("slice", "coil")}
@@ -191,6 +195,20 @@ def validate(scan: Scan) -> None:
     if scan.sensitivity_array is not None:
         _check_calibration("/sensitivity", scan.sensitivity_array, fixed, image)
         _check_map_size(scan, scan.sensitivity_array, image)
+
+
+def _check_numbers(name: str, array: LabelledArray | None) -> None:
+    """Arrays handed over in memory are checked as a file's are."""
+    if array is None or not isinstance(array.data, np.ndarray):
+        return
+    dtype = array.data.dtype
+    is_complex = (
+        dtype.kind == "c" or dtype.names is not None or (dtype.kind == "f" and COMPLEX_AXIS in array.labels)
+    )
+    if not is_complex:
+        raise InvalidScan(
+            f"{name} holds {dtype} numbers; accepted are complex ones: convert before handing them over"
+        )
 
 
 def _check_kspace_axes(array: LabelledArray) -> None:

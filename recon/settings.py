@@ -23,6 +23,8 @@ WAVELETS: Final = (
 )
 
 STRENGTH_LIMIT: Final = 1e6
+#: below this a strength does nothing in single precision; 0 says so plainly.
+SMALLEST_STRENGTH: Final = 1e-12
 
 
 def _strength(value: object) -> object:
@@ -32,7 +34,7 @@ def _strength(value: object) -> object:
         raise ValueError(
             f'expected "auto" or a number from 0 to {STRENGTH_LIMIT:g} in noise units, received {value!r}'
         )
-    if not math.isfinite(value) or not 0 <= value <= STRENGTH_LIMIT:
+    if not math.isfinite(value) or not (value == 0 or SMALLEST_STRENGTH <= value <= STRENGTH_LIMIT):
         raise ValueError(
             f'expected "auto" or a number from 0 to {STRENGTH_LIMIT:g} in noise units, received {value}'
         )
@@ -106,8 +108,10 @@ class Settings(BaseModel):
         `auto`: the supplied maps when the scan holds `/sensitivity`, else eigenvector maps.
     coil_compression : "auto", {"keep_energy": f}, {"coils": n} or null
     combination : {"sensitivity", "root-sum-of-squares"}
+        Of iterative methods the latter is the magnitude sqrt(sum_c |S_c m|^2), which is |m|; of `zero-filled`, the coil
+        images' own, which needs no maps.
     tolerance : float
-        The solver stops when its relative optimality residual falls below this.
+        The solver stops when its relative optimality residual falls below this; single precision ends near 1e-6.
     max_iterations : int
         And never later than this.
     """
@@ -128,7 +132,7 @@ class Settings(BaseModel):
         Literal["auto"] | KeepEnergy | KeepCoils | None, BeforeValidator(_compression)
     ] = "auto"
     combination: Literal["sensitivity", "root-sum-of-squares"] = "sensitivity"
-    tolerance: float = Field(default=5e-5, gt=0, lt=1, strict=True, allow_inf_nan=False)
+    tolerance: float = Field(default=5e-5, ge=1e-6, lt=1, strict=True, allow_inf_nan=False)
     max_iterations: int = Field(default=300, ge=1, le=100_000, strict=True)
 
 

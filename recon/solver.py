@@ -1,7 +1,7 @@
 """Accelerated proximal gradient for the wavelet-l1 + total-variation problem.
 
-    minimise over u   1/2 ||E u - d||^2 + lambda_w ||W u~||_1 (detail coefficients) + lambda_t TV(u)
-                      + lambda_f TV_frames(u) + lambda_r ||u||_*
+    minimise over u   1/2 ||E u - d||^2 + 1/2 ||u outside the maps||^2 + lambda_w ||W u~||_1 (details)
+                      + lambda_t TV(u) + lambda_f TV_frames(u) + lambda_r ||u||_*
 
 u is a plane, a volume (TV isotropic over three axes, W along all of them) or a series of planes (TV and W in each
 frame; total variation along the frames and the nuclear norm of the matrix (frame, pixel) join the frames).

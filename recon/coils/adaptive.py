@@ -52,7 +52,8 @@ def adaptive_maps(
     -------
     complex64 (coil, rows, columns)
     """
-    covariance = sum(_outer(low_resolution_images(block)) for block in blocks)
+    rows, columns = (min(block.shape[axis] for block in blocks) for axis in (1, 2))
+    covariance = sum(_outer(low_resolution_images(crop_block(block, rows, columns))) for block in blocks)
     assert isinstance(covariance, np.ndarray)
     window = (0, 0, WINDOW, WINDOW)
     local = uniform_filter(covariance.real, window, mode="wrap") + 1j * uniform_filter(

@@ -122,6 +122,15 @@ def _on_grid(lags: NDArray[Any], grid: tuple[int, ...]) -> NDArray[Any]:
     return matrices
 
 
+def nearest(fine: NDArray[Any], shape: tuple[int, ...]) -> NDArray[Any]:
+    """Values of a plane at the nearest points of a coarser grid over the same field of view; centres n//2 coincide."""
+    at = [
+        np.clip(np.rint((np.arange(n) - n // 2) * (m / n)).astype(int) + m // 2, 0, m - 1)
+        for n, m in zip(shape, fine.shape, strict=True)
+    ]
+    return np.asarray(fine[np.ix_(*at)])
+
+
 def interpolate(coarse: NDArray[Any], shape: tuple[int, int]) -> NDArray[Any]:
     """Linear interpolation from a grid over the field of view to a finer one; centres n//2 coincide, ends wrap."""
     out = coarse

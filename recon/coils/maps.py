@@ -8,14 +8,14 @@ whatever whitening and compression did: maps found in virtual coils are carried 
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Any, Literal
+from typing import Any, Final, Literal
 
 import numpy as np
 from numpy.typing import NDArray
 
 from recon.coils.adaptive import adaptive_maps, low_resolution_images
 from recon.coils.compression import Compression
-from recon.coils.eigenvector import eigenvector_maps
+from recon.coils.eigenvector import eigenvector_maps, nearest
 from recon.coils.noise import Whitening, mix
 from recon.errors import InvalidScan
 from recon.operators.fourier import crop_centre
@@ -23,7 +23,9 @@ from recon.scan import Scan
 
 MapMethod = Literal["eigenvector", "adaptive", "supplied", "single-coil"]
 #: the object, for the mean that defines noise units: pixels above this fraction of the largest magnitude.
-OBJECT_LEVEL = 0.1
+OBJECT_LEVEL: Final = 0.1
+#: mean square of a two-dimensional Hann window, (3/8)^2.
+HANN_POWER: Final = 9 / 64
 
 
 @dataclass(frozen=True)
@@ -36,10 +38,13 @@ class CoilMaps:
         Whitened and compressed, for an image in the object's intensity; zero outside the object.
     whitened : complex64 (coil, rows, columns)
         The same in all whitened physical coils.
+    object_share : float
+        Share of the object, at the resolution of the calibration, where the maps are not zero.
     """
 
     virtual: NDArray[np.complex64]
     whitened: NDArray[np.complex64]
+    object_share: float = 1.0
 
     @property
     def support(self) -> NDArray[np.bool_]:
@@ -80,7 +85,7 @@ class MapMaker:
         Raises
         ------
         InvalidScan
-            When supplied maps are zero everywhere or hold NaN or Inf.
+            When supplied maps are zero everywhere.
         """
         compressed = [self.compression.apply(block) for block in blocks]
         if self.method == "supplied":
@@ -94,11 +99,16 @@ class MapMaker:
                 compressed,
                 self.shape,
                 self.compression.reference,
-                has_noise_units=self.whitening.has_noise_units,
+                # the noise of a separate calibration is not that of the scan
+                has_noise_units=self.whitening.has_noise_units and self.scan.reference_array is None,
             )
         whitened = self.compression.expand(virtual)
         scale = _inverse_size(mix(self.whitening.unwhitener, whitened))
-        return CoilMaps(np.asarray(virtual * scale, np.complex64), np.asarray(whitened * scale, np.complex64))
+        inside = np.any(virtual != 0, axis=0)
+        share = 1.0 if inside.all() else _object_share(compressed, inside, self.whitening.has_noise_units)
+        return CoilMaps(
+            np.asarray(virtual * scale, np.complex64), np.asarray(whitened * scale, np.complex64), share
+        )
 
     def _supplied(self, position: int) -> CoilMaps:
         physical = self.scan.sensitivity(position)
@@ -106,21 +116,31 @@ class MapMaker:
             raise InvalidScan(
                 "coil_maps is supplied, but the scan has no /sensitivity: write maps or choose another"
             )
-        if not np.isfinite(physical).all():
-            raise InvalidScan("/sensitivity contains NaN or Inf; write finite numbers")
         if physical.shape[-1] > self.shape[1]:
             physical = crop_centre(physical, self.shape[1])
-        elif physical.shape[-1] < self.shape[1]:
-            raise InvalidScan(
-                "/sensitivity has readout oversampling removed, but the mask varies along kx, so that the plane is "
-                "solved with it: supply maps of the whole encoded field of view"
-            )
         if not physical.any():
             raise InvalidScan(
                 f"/sensitivity of slice {position} is zero everywhere; write the maps or leave them out"
             )
+        physical = physical / np.abs(physical).max()  # so that squares stay in range
         whitened = self.whitening.apply(physical * _inverse_size(physical))
         return CoilMaps(self.compression.apply(whitened), whitened)
+
+
+def _object_share(blocks: list[NDArray[Any]], inside: NDArray[np.bool_], has_noise_units: bool) -> float:
+    """Share of the object's low-resolution pixels, those well above the noise, that lie inside (1 without any)."""
+    total = within = 0
+    for block in blocks:
+        images = low_resolution_images(block)
+        power = np.asarray(np.sum(np.abs(images) ** 2, axis=0, dtype=np.float64))
+        # a Hann-weighted block spreads unit noise over a grid of more pixels than it has samples
+        noise = len(block) * HANN_POWER * block[0].size / power.size if has_noise_units else 0.0
+        # the sum over C coils of noise alone has a standard deviation of 1/sqrt(C) of its mean
+        limit = max(noise * (1 + 4 / np.sqrt(len(block))), OBJECT_LEVEL**2 * float(power.max()))
+        is_object = power > limit
+        total += int(is_object.sum())
+        within += int((is_object & nearest(inside, is_object.shape)).sum())
+    return within / total if total > 0 else 1.0
 
 
 def _inverse_size(maps: NDArray[Any]) -> NDArray[np.float32]:
@@ -128,21 +148,28 @@ def _inverse_size(maps: NDArray[Any]) -> NDArray[np.float32]:
     return np.divide(1.0, size, out=np.zeros_like(size), where=size > 0).astype(np.float32)
 
 
-def squared_gain(block: NDArray[Any], whitening: Whitening, compression: Compression) -> tuple[float, float]:
-    """Sum and count, over the object's low-resolution pixels, of S^H Psi^-1 S with sum |S|^2 = 1 in physical coils.
+def squared_gain(blocks: list[NDArray[Any]], whitening: Whitening, compression: Compression) -> float:
+    """Mean over the object of S^H Psi^-1 S with sum |S|^2 = 1 in physical coils, 1 where there is no object.
 
     The coil images of a calibration block point along S at each pixel, which is all that the ratio needs; so the mean
     over every slice is known before the first is solved.
 
     Parameters
     ----------
-    block : complex (coil, rows, columns)
-        Whitened calibration k-space.
+    blocks : list of complex (coil, rows, columns)
+        Raw calibration k-space of every slice.
     """
-    images = low_resolution_images(block)
-    virtual = np.asarray(np.sum(np.abs(compression.apply(images)) ** 2, axis=0, dtype=np.float64))
-    physical = np.asarray(np.sum(np.abs(mix(whitening.unwhitener, images)) ** 2, axis=0, dtype=np.float64))
-    inside = virtual > OBJECT_LEVEL**2 * virtual.max()
-    if virtual.max() == 0:
-        return 0.0, 0.0
-    return float(np.sum(virtual[inside] / physical[inside])), float(inside.sum())
+    powers = []
+    for block in blocks:
+        images = low_resolution_images(whitening.apply(block))
+        virtual = np.sum(np.abs(compression.apply(images)) ** 2, axis=0, dtype=np.float64)
+        physical = np.sum(np.abs(mix(whitening.unwhitener, images)) ** 2, axis=0, dtype=np.float64)
+        powers.append((np.asarray(virtual), np.asarray(physical)))
+    # one level for the whole scan, so that slices without an object do not count
+    level = OBJECT_LEVEL**2 * max(float(virtual.max()) for virtual, _ in powers)
+    total, count = 0.0, 0
+    for virtual, physical in powers:
+        inside = virtual > level
+        total += float(np.sum(virtual[inside] / physical[inside]))
+        count += int(inside.sum())
+    return total / count if count else 1.0

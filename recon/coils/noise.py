@@ -44,6 +44,8 @@ class Whitening:
         `none`: the scan is free of noise, strengths are fractions of the largest zero-filled image value.
     samples : int
         Complex samples for each coil behind the estimate.
+    clamped : int
+        Directions among the coils with next to no noise, which were raised to `SMALLEST_EIGENVALUE`.
     """
 
     whitener: NDArray[Any]
@@ -51,6 +53,7 @@ class Whitening:
     covariance: NDArray[Any]
     source: str
     samples: int
+    clamped: int = 0
 
     @property
     def has_noise_units(self) -> bool:
@@ -90,6 +93,17 @@ def dwell_scale(
 def whitening_from(covariance: NDArray[Any], source: str, samples: int) -> Whitening:
     """Hermitian square roots of a covariance.
 
+    The inverse of a covariance estimated from n samples of C coils is too large by n / (n - C) on average
+    (Wishart). The whitener carries that factor, so that whitened noise has unit variance in the mean.
+
+    Parameters
+    ----------
+    covariance : complex (coil, coil)
+    source : str
+        See `Whitening`.
+    samples : int
+        n; 0 for a covariance that is known.
+
     Raises
     ------
     InvalidScan
@@ -99,13 +113,17 @@ def whitening_from(covariance: NDArray[Any], source: str, samples: int) -> White
     largest = float(values[-1])
     if not np.isfinite(largest) or largest <= 0:
         raise InvalidScan("/noise holds only zeros; write the noise readouts as measured or leave /noise out")
-    root = np.sqrt(np.maximum(values, SMALLEST_EIGENVALUE * largest))
+    floor = SMALLEST_EIGENVALUE * largest
+    freedom = samples - len(covariance)
+    inflation = samples / freedom if source == "noise-scan" and freedom > 0 else 1.0
+    root = np.sqrt(inflation * np.maximum(values, floor))
     return Whitening(
         whitener=(vectors / root) @ vectors.conj().T,
         unwhitener=(vectors * root) @ vectors.conj().T,
         covariance=covariance,
         source=source,
         samples=samples,
+        clamped=int((values < floor).sum()),
     )
 
 
@@ -132,7 +150,8 @@ def estimate_whitening(scan: Scan) -> Whitening:
         identity = np.eye(scan.coils, dtype=np.complex128)
         unit = max(_largest_zero_filled(scan, index) for index in scan.planes()) or 1.0
         return Whitening(identity / unit, identity * unit, identity * 0, "none", 0)
-    return whitening_from(covariance, "periphery", samples)
+    # what signal is left out there is coherent between coils and would be whitened away: variances alone are trusted
+    return whitening_from(np.diag(np.diag(covariance)), "periphery", samples)
 
 
 def periphery_covariance(scan: Scan) -> tuple[NDArray[Any], int, float]:

@@ -102,7 +102,9 @@ def text(value: Any) -> str | None:
     return str(value) if isinstance(value, str) else None
 
 
-def labels(name: str, found: h5py.Dataset, accepted: tuple[str, ...]) -> tuple[str, ...]:
+def labels(
+    name: str, found: h5py.Dataset, accepted: tuple[str, ...], *, may_be_complex: bool = True
+) -> tuple[str, ...]:
     """Axis labels of a dataset in storage (C) order, from any of the three accepted places.
 
     Dimension labels, the attribute `axes` (C order) and the attribute `axes_fastest_first` (column-major order)
@@ -134,7 +136,8 @@ def labels(name: str, found: h5py.Dataset, accepted: tuple[str, ...]) -> tuple[s
             f"/{name}: the axis labels disagree ({said}, all in C order); keep one or make them agree"
         )
     found_labels = next(iter(sources.values()))
-    _check_labels(name, found, found_labels, accepted)
+    extra = (COMPLEX_AXIS,) if may_be_complex else ()
+    _check_labels(name, found, found_labels, (*accepted, *extra))
     return found_labels
 
 
@@ -160,7 +163,7 @@ def _check_labels(name: str, found: h5py.Dataset, given: tuple[str, ...], accept
             f"/{name} has {len(found.shape)} dimensions but {len(given)} axis labels ({','.join(given)}); label each"
         )
     for label in given:
-        if label not in accepted and label != COMPLEX_AXIS:
+        if label not in accepted:
             shown = label or "(empty)"
             raise InvalidScan(f"/{name} has the unknown axis {shown}; accepted are {', '.join(accepted)}")
     if len(set(given)) != len(given):
@@ -219,4 +222,4 @@ def mask_array(file: h5py.File, name: str, accepted: tuple[str, ...]) -> Labelle
         return None
     if found.dtype != np.bool_ and found.dtype != np.uint8:
         raise InvalidScan(f"/{name} holds {found.dtype} numbers; accepted are bool or uint8, 1 where sampled")
-    return LabelledArray(found, labels(name, found, accepted))
+    return LabelledArray(found, labels(name, found, accepted, may_be_complex=False))

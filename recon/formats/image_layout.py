@@ -17,7 +17,7 @@ from recon.axes import image_axis
 from recon.caution import CAUTION
 from recon.errors import InvalidScan
 from recon.formats import hdf5
-from recon.scan import PlaneIndex, Scan
+from recon.scan import PlaneIndex, Scan, cropped_readout
 
 LAYOUT: Final = "fallow-image"
 LAYOUT_VERSION: Final = 1
@@ -110,7 +110,8 @@ def geometry(scan: Scan) -> dict[str, Any]:
     found = {name: scan.attributes[name] for name in _GEOMETRY if name in scan.attributes}
     if "field_of_view_mm" in found:
         x, y, z = found["field_of_view_mm"]
-        found["field_of_view_mm"] = [x / float(scan.attributes.get("readout_oversampling", 1.0)), y, z]
+        cropped = cropped_readout(scan) / scan.plane_shape[1]
+        found["field_of_view_mm"] = [x * cropped, y, z]
     return found
 
 

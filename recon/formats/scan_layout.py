@@ -204,7 +204,9 @@ def write_scan(
                 if array is not None:
                     _write_array(file, name, array, labels, compression)
             file["kspace"].attrs.update(attributes or {})
-            if noise_attributes and noise is not None:
+            if noise_attributes and noise is None:
+                raise InvalidScan("noise_attributes were given without noise; give both or neither")
+            if noise_attributes:
                 file["noise"].attrs.update(noise_attributes)
         read_scan(path).close()
     except InvalidScan:

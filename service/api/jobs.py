@@ -10,7 +10,7 @@ from typing import Annotated, Any
 from fastapi import APIRouter, Header, Request, Response
 from fastapi.responses import JSONResponse
 
-from recon.inspection import check_job
+from recon.feasibility import check_job
 from service.api.answers import describe_job, job_answer
 from service.api.routing import (
     Answers,

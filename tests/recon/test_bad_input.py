@@ -14,8 +14,9 @@ from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
 from recon.errors import CalibrationMissing, InvalidScan, InvalidSettings, ReconError
+from recon.feasibility import check_job
 from recon.formats import open_scan
-from recon.inspection import check_job, inspect
+from recon.inspection import inspect
 from recon.settings import Settings, parse_settings
 from tests.recon.helpers import complex_normal, line_mask
 

@@ -27,7 +27,7 @@ def _events(answer: httpx.Response) -> Iterator[tuple[str, dict[str, Any]]]:
 
 
 def test_stream_tells_the_course_and_ends(client: Caller, order: Order, runner: JobRunner) -> None:
-    job = order(settings={"max_iterations": 40, "tolerance": 1e-9})
+    job = order(settings={"max_iterations": 40, "tolerance": 1e-6})
     with client.stream("GET", f"/v1/jobs/{job['id']}/events") as answer:
         assert answer.headers["content-type"].startswith("text/event-stream")
         events = _events(answer)

@@ -1,0 +1,73 @@
+"""Can these settings work with this scan? Judged on the scan's stored facts, before any time is spent."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Any
+
+from recon.coils.calibration import check_block
+from recon.errors import InvalidScan, InvalidSettings
+from recon.settings import Settings
+
+
+def check_job(facts: Mapping[str, Any], settings: Settings) -> None:
+    """Refuse settings that cannot work with a scan, before any time is spent on it.
+
+    Parameters
+    ----------
+    facts : mapping
+        `Inspection.as_dict()` of the scan.
+    settings : Settings
+
+    Raises
+    ------
+    CalibrationMissing
+        When the settings need coil maps and there is nothing to compute them from.
+    InvalidSettings
+        For more virtual coils than coils, or supplied maps that are not there.
+    """
+    coils = int(facts["axes"].get("coil", 1))
+    rule = settings.coil_compression
+    wanted = getattr(rule, "coils", None)
+    if wanted is not None and wanted > coils:
+        raise InvalidSettings(
+            [
+                {
+                    "pointer": "/coil_compression",
+                    "detail": f"received {wanted} coils for a scan with {coils}; accepted is up to that",
+                }
+            ]
+        )
+    has_maps = bool(facts["objects"]["sensitivity"])
+    if settings.coil_maps == "supplied" and not has_maps:
+        raise InvalidSettings(
+            [
+                {
+                    "pointer": "/coil_maps",
+                    "detail": "received supplied, but the scan has no /sensitivity; add maps or choose eigenvector",
+                }
+            ]
+        )
+    if has_maps and settings.coil_maps in ("auto", "supplied"):
+        encoded = int(facts["axes"]["kx" if "kx" in facts["axes"] else "ky"])
+        if facts["sampling"]["varies_along_readout"] and facts["objects"]["sensitivity"][1] < encoded:
+            raise InvalidScan(
+                f"/sensitivity has {facts['objects']['sensitivity'][1]} columns, but the mask varies along kx, so that "
+                f"the plane is solved with its oversampling: supply maps with {encoded} columns"
+            )
+        return
+    if not needs_maps(settings, coils):
+        return
+    matrix = tuple(facts["image"]["matrix"])
+    if facts["objects"]["reference"] is not None:
+        rows, columns = facts["objects"]["reference"]
+        check_block(rows, columns, (matrix[0], matrix[1]), "/reference")
+    else:
+        rows, columns = (facts["sampling"]["calibration"][side] for side in ("rows", "columns"))
+        check_block(rows, columns, (matrix[0], matrix[1]), "the scan")
+
+
+def needs_maps(settings: Settings, coils: int) -> bool:
+    """Whether a reconstruction with these settings uses coil maps at all."""
+    is_coilwise = settings.method == "zero-filled" and settings.combination == "root-sum-of-squares"
+    return coils > 1 and not is_coilwise
