@@ -73,8 +73,8 @@ def map_findings(shares: Mapping[int, float]) -> list[Finding]:
         Finding(
             "maps-incomplete",
             "error" if poor[worst] == 0 else "warning",
-            f"The coil maps of {len(poor)} slice(s) leave out part of the object ({1 - poor[worst]:.0%} of "
-            f"slice {worst}), and the image is zero there: sample more of the centre, try adaptive maps or supply some.",
+            f"The coil maps of {len(poor)} slice(s) leave out part of the object ({1 - poor[worst]:.0%} of slice "
+            f"{worst}), and the image is zero there: sample more of the centre, try adaptive maps, or supply some.",
             f"slice {worst}",
             {"slices": len(poor), "smallest_share": poor[worst]},
         )
