@@ -35,7 +35,7 @@ from recon.penalties import nuclear_norm, project_spectral
 DUAL_STEPS: Final = 2
 #: one step more whenever the optimality has not fallen by a fifth in this many iterations; and no more than so many.
 PATIENCE: Final = 10
-MOST_DUAL_STEPS: Final = 16
+MOST_DUAL_STEPS: Final = 4
 #: step of the dual gradient as a fraction of 1 / ||K||^2, K being all operators inside the dual terms; 2 is its limit.
 DUAL_STEP: Final = 1.9
 
