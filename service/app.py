@@ -4,8 +4,9 @@ from __future__ import annotations
 
 import asyncio
 from collections.abc import AsyncIterator
+from concurrent.futures import ThreadPoolExecutor
 from contextlib import asynccontextmanager
-from typing import Any
+from typing import Any, Final
 
 from fastapi import FastAPI, Request
 from fastapi.exceptions import RequestValidationError
@@ -23,6 +24,8 @@ from service.services import Services
 from service.settings import ServiceSettings
 
 ROUTERS = (scans.router, jobs.router, events.router, results.router, health.router)
+#: Threads for what waits for a database: many, so that calls that wait to write do not hold up those that read.
+_THREADS: Final = 64
 
 
 def create_app(settings: ServiceSettings) -> FastAPI:
@@ -40,6 +43,8 @@ def create_app(settings: ServiceSettings) -> FastAPI:
 
     @asynccontextmanager
     async def lifespan(app: FastAPI) -> AsyncIterator[None]:
+        threads = ThreadPoolExecutor(_THREADS, thread_name_prefix="fallow-call")
+        asyncio.get_running_loop().set_default_executor(threads)
         services = await asyncio.to_thread(Services, settings)
         app.state.services = services
         try:

@@ -52,7 +52,8 @@ class Faults:
 async def send_problem(error: Exception, scope: Scope, send: Send) -> None:
     """Answer with the problem document of an exception."""
     document, headers = problem_of(error)
-    body = json.dumps(document, ensure_ascii=False).encode()
+    # A lone surrogate that the caller sent goes back as the escape that it came as.
+    body = json.dumps(document, ensure_ascii=False).encode(errors="backslashreplace")
     fields = {"Content-Type": PROBLEM_MEDIA_TYPE, "Content-Length": str(len(body)), **headers}
     raw = [(name.lower().encode("latin-1"), value.encode("latin-1")) for name, value in fields.items()]
     await send({"type": "http.response.start", "status": document["status"], "headers": raw})

@@ -149,7 +149,7 @@ def kind_of(error: BaseException) -> ProblemKind:
     for ancestor in type(error).__mro__:
         if ancestor in KINDS:
             return KINDS[ancestor]
-    return UNAVAILABLE if _shortage(error) else INTERNAL
+    return UNAVAILABLE if shortage(error) else INTERNAL
 
 
 def problem(
@@ -186,7 +186,7 @@ def problem_of(error: BaseException) -> tuple[dict[str, Any], dict[str, str]]:
         return problem(kind, str(error)), {}
     if kind is UNAVAILABLE:
         log.warning("request could not be served: %s", error)
-        return problem(kind, f"{_shortage(error)}; try again later"), {"Retry-After": "5"}
+        return problem(kind, f"{shortage(error)}; try again later"), {"Retry-After": "5"}
     correlation = str(uuid.uuid4())
     log.error("unexpected error %s", correlation, exc_info=error)
     detail = (
@@ -202,7 +202,7 @@ def pointers(error: InvalidSettings, prefix: str = "/settings") -> list[dict[str
     ]
 
 
-def _shortage(error: BaseException) -> str | None:
+def shortage(error: BaseException) -> str | None:
     """What the machine is short of, when that is why `error` was raised."""
     if isinstance(error, OSError) and error.errno in {errno.ENOSPC, errno.EDQUOT}:
         return "the disk of the service is full"

@@ -9,7 +9,7 @@ from fastapi.exceptions import RequestValidationError
 from fastapi.routing import APIRoute
 from starlette.exceptions import HTTPException
 
-from recon.errors import InvalidSettings
+from recon.errors import InvalidSettings, ReconError
 from service.errors import Malformed, MethodNotAllowed, NotFound, Refused, ServiceError, pointers
 
 
@@ -31,8 +31,12 @@ def from_validation(error: RequestValidationError) -> ServiceError:
 
 def from_http(path: str, method: str, error: HTTPException, routes: Iterable[APIRoute]) -> Exception:
     """Turn an error of the framework into one of ours; one that it only wrapped comes out again."""
-    if isinstance(error.__cause__, Exception):
-        return error.__cause__
+    cause = error.__cause__
+    if isinstance(cause, ValueError | RecursionError) and not isinstance(cause, ServiceError | ReconError):
+        # What the parser says of bytes that are no text, of numbers without end and of a bottomless nesting.
+        return Malformed(f"the body is no JSON: {_why_no_json(cause)}; send a JSON object in UTF-8")
+    if isinstance(cause, Exception):
+        return cause
     if error.status_code == 404:
         return NotFound(f"there is nothing at {path}: see /openapi.json for the paths there are")
     if error.status_code == 405:
@@ -43,6 +47,14 @@ def from_http(path: str, method: str, error: HTTPException, routes: Iterable[API
             headers={"Allow": accepted},
         )
     return Malformed(str(error.detail))
+
+
+def _why_no_json(cause: ValueError | RecursionError) -> str:
+    if isinstance(cause, RecursionError):
+        return "it is nested too deeply"
+    if isinstance(cause, UnicodeError):
+        return "its bytes are no text in UTF-8"
+    return "it holds a number with too many digits"
 
 
 def _mistakes(item: Mapping[str, Any]) -> Iterator[dict[str, str]]:

@@ -2,10 +2,19 @@
 
 from __future__ import annotations
 
+import unicodedata
 from datetime import datetime
 from typing import Annotated, Any, Literal
 
-from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, StringConstraints, field_validator
+from pydantic import (
+    AfterValidator,
+    BaseModel,
+    BeforeValidator,
+    ConfigDict,
+    Field,
+    StringConstraints,
+    field_validator,
+)
 
 from recon.caution import CAUTION
 from recon.settings import Settings, parse_settings
@@ -13,7 +22,14 @@ from service.store.estimates import Estimate
 from service.store.jobs import JobRecord
 from service.store.scans import ScanRecord
 
-Label = Annotated[str, StringConstraints(min_length=1, max_length=200)]
+
+def _printable(label: str) -> str:
+    if any(unicodedata.category(character) == "Cc" for character in label):
+        raise ValueError("control characters such as line breaks are not accepted: leave them out")
+    return label
+
+
+Label = Annotated[str, StringConstraints(min_length=1, max_length=200), AfterValidator(_printable)]
 JobState = Literal["accepted", "running", "successful", "failed", "dismissed"]
 Priority = Literal["routine", "urgent"]
 

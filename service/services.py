@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import logging
 import shutil
+from typing import Final
 
 from service.gate import Gate
 from service.prepare import prepare
@@ -19,6 +20,9 @@ from service.tokens import Tokens, owner_token
 from service.watch import Watch
 
 log = logging.getLogger("fallow")
+
+#: A caller who waits for an answer is told of a locked database after this long; workers have more patience.
+_PATIENCE_SECONDS: Final = 5.0
 
 
 class Services:
@@ -41,7 +45,7 @@ class Services:
             )
         self._lock = lock
         self.tokens = Tokens(owner_token(settings.token_file))
-        self.database = Database(settings.database_url)
+        self.database = Database(settings.database_url, patience_seconds=_PATIENCE_SECONDS)
         self.scans = ScanStore(self.database)
         self.jobs = JobStore(self.database)
         self.idempotency = IdempotencyStore(self.database, settings.idempotency_seconds)

@@ -10,6 +10,7 @@ from typing import Any, Final
 from fastapi import Request, Response
 from fastapi.responses import FileResponse, JSONResponse
 
+from service.api.routing import Answers
 from service.errors import RangeNotSatisfiable, Unavailable, WrongState
 from service.schemas import JobOut
 from service.services import Services
@@ -17,6 +18,10 @@ from service.store.jobs import JobRecord
 from service.uploads import repr_digest
 
 _RANGE: Final = re.compile(r"bytes=\s*(?:\d+-\d*|-\d+)(?:\s*,\s*(?:\d+-\d*|-\d+))*\s*")
+PARTIAL: Final[Answers] = {
+    206: {"description": "The ranges that were asked for"},
+    304: {"description": "The version that `If-None-Match` names is still the one"},
+}
 _MOST_RANGES: Final = 16
 _SHORTEST_RETRY: Final = 1
 _LONGEST_RETRY: Final = 30
@@ -121,11 +126,18 @@ def _settle_range(request: Request, etag: str, size: int) -> None:
             (name, value) for name, value in request.scope["headers"] if name != b"range"
         ]
         return
-    if all(first and int(first) >= size for first, _ in parts):
+    within = [part for part in parts if not part[0] or int(part[0]) < size]
+    if not within:
         raise RangeNotSatisfiable(
             f"the range {wanted} lies beyond the end of the file, which has {size} bytes",
             headers={"Content-Range": f"bytes */{size}"},
         )
+    if len(within) < len(parts):
+        # What can be satisfied is sent (RFC 9110, 14.2); the rest is left out.
+        kept = "bytes=" + ",".join("-".join(part) for part in within)
+        request.scope["headers"] = [
+            (name, kept.encode() if name == b"range" else value) for name, value in request.scope["headers"]
+        ]
 
 
 def _are_ordered(parts: list[list[str]]) -> bool:

@@ -10,7 +10,7 @@ from fastapi import APIRouter
 from sqlalchemy import text
 
 from service.api.routing import Parts, Route, documented
-from service.errors import Unavailable
+from service.errors import Unavailable, shortage
 from service.provenance import fallow_version
 from service.schemas import Health
 from service.services import Services
@@ -72,5 +72,5 @@ def _trouble(check: Callable[[Services], None], parts: Services) -> str | None:
     except OSError as error:
         return str(error)
     except Exception as error:
-        return type(error).__name__
+        return shortage(error) or type(error).__name__
     return None

@@ -11,7 +11,7 @@ from fastapi import APIRouter, Header, Request, Response
 from fastapi.responses import JSONResponse
 
 from recon.feasibility import check_job
-from service.api.answers import describe_job, job_answer
+from service.api.answers import describe_job, job_answer, retry_after
 from service.api.routing import (
     Answers,
     Caller,
@@ -65,11 +65,13 @@ async def order_job(
     fingerprint = hashlib.sha256(b"job " + await request.body()).hexdigest()
     answer, job = await asyncio.to_thread(_write_row, parts, caller.owner, order, key, fingerprint)
     if job is not None:
-        await asyncio.to_thread(parts.queue.put, job)
+        await asyncio.to_thread(parts.queue.put_soon, job)
     if wait:
         job = await parts.watch.until_finished(caller.owner, answer["body"]["id"], wait)
         described = await describe_job(parts, job)
-        return job_answer(described, 200 if job.is_finished else 202, answer["headers"] | wait_applied(wait))
+        status = 200 if job.is_finished else 202
+        location = {"Location": answer["headers"]["Location"]}
+        return job_answer(described, status, location | wait_applied(wait))
     return JSONResponse(answer["body"], answer["status"], answer["headers"])
 
 
@@ -110,9 +112,9 @@ def _write_row(
                 "pace": order.settings.method,
             },
         )
-        body = JobOut.of(job, parts.estimates.of(job)).model_dump(mode="json")
-        headers = {"Location": f"/v1/jobs/{job.id}", "Retry-After": "1"}
-        answer = {"status": 202, "headers": headers, "body": body}
+        described = JobOut.of(job, parts.estimates.of(job))
+        headers = {"Location": f"/v1/jobs/{job.id}", "Retry-After": str(retry_after(described))}
+        answer = {"status": 202, "headers": headers, "body": described.model_dump(mode="json")}
         if key is not None:
             parts.idempotency.record(connection, owner, key, fingerprint, answer)
     return answer, job
@@ -144,7 +146,7 @@ async def get_job(
 async def dismiss_job(parts: Parts, caller: Caller, job_id: str) -> JobOut:
     """End a waiting or running job; one that is dismissed already stays so."""
     job = await asyncio.to_thread(parts.jobs.dismiss, caller.owner, job_id)
-    await asyncio.to_thread(parts.queue.cancel, job_id)
+    await asyncio.to_thread(parts.queue.cancel_soon, job_id)
     return await describe_job(parts, job)
 
 
@@ -153,5 +155,5 @@ def delete_job(parts: Parts, caller: Caller, job_id: str) -> Response:
     """Remove a finished job and its results."""
     parts.jobs.remove(caller.owner, job_id)
     parts.files.remove_result(job_id)
-    parts.queue.forget(job_id)
+    parts.queue.forget_soon(job_id)
     return Response(status_code=204)

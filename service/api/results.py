@@ -7,7 +7,7 @@ import asyncio
 from fastapi import APIRouter, Request, Response
 from fastapi.responses import FileResponse
 
-from service.api.answers import file_answer, result_facts, result_file
+from service.api.answers import PARTIAL, file_answer, result_facts, result_file
 from service.api.routing import Answers, Caller, Parts, Route, documented
 from service.compute import IMAGE, PICTURES, REPORT
 from service.errors import NotFound
@@ -18,11 +18,10 @@ from service.uploads import SCAN_MEDIA_TYPE
 router = APIRouter(prefix="/v1/jobs/{job_id}", tags=["results"], route_class=Route)
 
 _PROBLEMS = documented(404, 409, 416)
-_PARTIAL: Answers = {206: {"description": "The ranges that were asked for"}}
 
 
 def _content(media_type: str, what: str) -> Answers:
-    return {200: {"content": {media_type: {}}, "description": what}} | _PARTIAL | _PROBLEMS
+    return {200: {"content": {media_type: {}}, "description": what}} | PARTIAL | _PROBLEMS
 
 
 @router.get(

@@ -9,7 +9,7 @@ from typing import Annotated, Any, Final, cast
 from fastapi import Depends, Query, Request, Response
 from fastapi.dependencies.models import Dependant
 from fastapi.routing import APIRoute
-from pydantic import AwareDatetime
+from pydantic import AwareDatetime, BeforeValidator
 
 from service.errors import KINDS, PROBLEM_MEDIA_TYPE, Malformed, Refused, WrongMediaType
 from service.schemas import Problem
@@ -20,6 +20,9 @@ from service.tokens import Principal
 _LONGEST_WAIT: Final = 60
 _LARGEST_PAGE: Final = 200
 _WAIT: Final = re.compile(r"(?:^|[,;\s])wait\s*=\s*\"?(\d{1,9})\"?(?=$|[,;\s])", re.IGNORECASE)
+_MOMENT: Final = re.compile(
+    r"\d{4}-\d\d-\d\d[Tt ]\d\d:\d\d:\d\d(?:\.\d{1,9})?(?:[Zz]|[+-]\d\d:\d\d)", re.ASCII
+)
 _KEY: Final = re.compile(r"[\x21-\x7e]{1,255}")
 
 
@@ -39,6 +42,13 @@ class Route(APIRoute):
                 raise Malformed(
                     f"unknown query parameter {', '.join(unknown)}; {accepted}",
                     errors=[{"parameter": name, "detail": "unknown"} for name in unknown],
+                )
+            names = [name for name, _ in request.query_params.multi_items()]
+            repeated = sorted({name for name in names if names.count(name) > 1})
+            if repeated:
+                raise Malformed(
+                    f"the query parameter {', '.join(repeated)} is given more than once; give it once",
+                    errors=[{"parameter": name, "detail": "given more than once"} for name in repeated],
                 )
             if takes_json:
                 _check_json(request)
@@ -62,11 +72,23 @@ Parts = Annotated[Services, Depends(services_of)]
 Caller = Annotated[Principal, Depends(caller_of)]
 
 
+def _rfc3339(value: object) -> object:
+    if isinstance(value, str) and _MOMENT.fullmatch(value) is None:
+        raise ValueError(
+            "expected a moment of RFC 3339 with its offset from UTC, such as 2026-03-01T09:30:00Z, received "
+            f"{value[:60]!r}"
+        )
+    return value
+
+
+Moment = Annotated[AwareDatetime, BeforeValidator(_rfc3339)]
+
+
 def list_filter(
     label: Annotated[str | None, Query(max_length=200, description="exactly this label")] = None,
     state: Annotated[str | None, Query(description="exactly this state")] = None,
-    created_after: Annotated[AwareDatetime | None, Query(description="made at or after this moment")] = None,
-    created_before: Annotated[AwareDatetime | None, Query(description="made before this moment")] = None,
+    created_after: Annotated[Moment | None, Query(description="made at or after this moment")] = None,
+    created_before: Annotated[Moment | None, Query(description="made before this moment")] = None,
     cursor: Annotated[str | None, Query(description="`next` of the page before")] = None,
     limit: Annotated[int, Query(ge=1, le=_LARGEST_PAGE, description="most items of a page")] = 50,
 ) -> Filter:

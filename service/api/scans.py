@@ -4,11 +4,13 @@ from __future__ import annotations
 
 import asyncio
 import hashlib
+from dataclasses import replace
 from typing import Annotated
 
 from fastapi import APIRouter, Query, Request, Response
 from fastapi.responses import FileResponse, JSONResponse
 
+from service.api.answers import PARTIAL, file_answer
 from service.api.routing import (
     Answers,
     Caller,
@@ -21,7 +23,7 @@ from service.api.routing import (
 )
 from service.errors import NotFound
 from service.ids import new_id
-from service.schemas import ScanOut, ScanPage
+from service.schemas import Label, ScanOut, ScanPage
 from service.services import Services
 from service.store.idempotency import check_same_request
 from service.store.scans import ScanRecord
@@ -54,7 +56,12 @@ _BODY = {
 }
 
 
-_SAME: Answers = {200: {"model": ScanOut, "description": "The same content was sent before: the same scan"}}
+_SAME: Answers = {
+    200: {
+        "model": ScanOut,
+        "description": "The same content was sent before: the same scan, under the label sent last if there is one",
+    }
+}
 
 
 @router.post(
@@ -69,7 +76,8 @@ async def send_scan(
     parts: Parts,
     caller: Caller,
     label: Annotated[
-        str | None, Query(min_length=1, max_length=200, description="a name of the caller's own")
+        Label | None,
+        Query(description="a name of the caller's own; sent again with the content, the newest holds"),
     ] = None,
 ) -> Response:
     """Send a scan file: it is checked, and inspected in a process of its own, before it is accepted."""
@@ -111,7 +119,7 @@ async def _accept(parts: Services, owner: str, upload: Upload, label: str | None
     """Examine an upload and keep it; content that the owner sent before is the scan that it became then."""
     there = await asyncio.to_thread(parts.scans.by_content, owner, upload.sha256)
     if there is not None:
-        return 200, there
+        return 200, await asyncio.to_thread(parts.scans.add, replace(there, label=label))
     found = await parts.gate.examine(upload.path, upload.preview)
     scan = ScanRecord(
         id=new_id(),
@@ -163,14 +171,17 @@ def delete_scan(parts: Parts, caller: Caller, scan_id: str) -> Response:
     return Response(status_code=204)
 
 
-_PNG: Answers = {200: {"content": {"image/png": {}}, "description": "A picture"}}
+_PNG: Answers = {200: {"content": {"image/png": {}}, "description": "A picture"}, **PARTIAL}
 
 
-@router.get("/{scan_id}/preview.png", response_class=FileResponse, responses=_PNG | documented(404))
-def get_preview(parts: Parts, caller: Caller, scan_id: str) -> Response:
+@router.get("/{scan_id}/preview.png", response_class=FileResponse, responses=_PNG | documented(404, 416))
+def get_preview(request: Request, parts: Parts, caller: Caller, scan_id: str) -> Response:
     """Show a quick look: the middle plane, zero-filled, root-sum-of-squares."""
     scan = parts.scans.get(caller.owner, scan_id)
     path = parts.files.preview(scan.id)
     if not path.is_file():
         raise NotFound(f"the quick look of scan {scan_id} is missing on the disk of the service")
-    return FileResponse(path, media_type="image/png", headers={"Cache-Control": "private, no-cache"})
+    # Small, and written once: its digest is soon found.
+    content = path.read_bytes()
+    sha256 = hashlib.sha256(content).hexdigest()
+    return file_answer(request, path, sha256=sha256, size=len(content), media_type="image/png")

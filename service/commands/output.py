@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import sys
+import unicodedata
 from collections.abc import Iterable, Mapping, Sequence
 from pathlib import Path
 from typing import Any
@@ -21,15 +22,20 @@ def print_facts(facts: Mapping[str, Any]) -> None:
     shown = {name: value for name, value in facts.items() if value is not None}
     width = max((len(name) for name in shown), default=0)
     for name, value in shown.items():
-        print(f"{name:<{width}}  {value}")
+        print(f"{name:<{width}}  {_clean(str(value))}")
 
 
 def print_table(head: Sequence[str], rows: Iterable[Sequence[str]]) -> None:
     """Columns as wide as their widest cell."""
-    table = [list(head), *(list(row) for row in rows)]
+    table = [list(head), *([_clean(cell) for cell in row] for row in rows)]
     widths = [max(len(cell) for cell in column) for column in zip(*table, strict=True)]
     for row in table:
         print("  ".join(f"{cell:<{width}}" for cell, width in zip(row, widths, strict=True)).rstrip())
+
+
+def _clean(cell: str) -> str:
+    """A cell without control characters: what others wrote must not steer the terminal."""
+    return "".join(" " if unicodedata.category(character) == "Cc" else character for character in cell)
 
 
 def print_findings(findings: Iterable[Mapping[str, Any]]) -> None:

@@ -5,7 +5,8 @@ from __future__ import annotations
 import itertools
 import logging
 import threading
-from typing import Any
+from collections.abc import Callable
+from typing import Any, Final
 
 from dbos import DBOSClient
 
@@ -22,6 +23,8 @@ log = logging.getLogger("fallow")
 
 #: Every so many sweeps one is thorough.
 _THOROUGH_EVERY = 10
+#: The engine waits for a locked database without end: it is asked only when the lock is free within this time.
+_PATIENCE_SECONDS: Final = 2.0
 _UNDER_WAY = frozenset({"ENQUEUED", "DELAYED", "PENDING"})
 
 
@@ -33,6 +36,7 @@ class JobQueue:
 
     def __init__(self, settings: ServiceSettings, database: Database, files: Files) -> None:
         self._engine = make_engine(settings.queue_url)
+        self._impatient = make_engine(settings.queue_url, patience_seconds=_PATIENCE_SECONDS)
         self._client: DBOSClient = open_client(self._engine)
         self._attempts = AttemptStore(database)
         self._workers = WorkerStore(database, settings.dead_seconds)
@@ -64,9 +68,31 @@ class JobQueue:
         """Remove the engine's memory of a finished job."""
         self._client.delete_workflow(job_id)
 
+    def put_soon(self, job: JobRecord) -> None:
+        """Put a job in, or leave that to the sweep when the databases do not answer soon."""
+        self._soon(job.id, "gets its place in the queue later", lambda: self.put(job))
+
+    def cancel_soon(self, job_id: str) -> None:
+        """Take a dismissed job out, if possible soon; otherwise the worker that meets it leaves it alone."""
+        self._soon(
+            job_id, "stays in the queue until a worker finds it dismissed", lambda: self.cancel(job_id)
+        )
+
+    def forget_soon(self, job_id: str) -> None:
+        """Remove the engine's memory of a finished job, if possible soon; what stays of it does no harm."""
+        self._soon(job_id, "is remembered by the queue", lambda: self.forget(job_id))
+
     def check(self) -> None:
-        """Make sure that the engine's database answers; raises what is wrong otherwise."""
-        self._client.check_connection()
+        """Make sure that the engine's database can be written; raises what is wrong otherwise."""
+        with self._impatient.begin():
+            pass
+
+    def _soon(self, job_id: str, otherwise: str, call: Callable[[], None]) -> None:
+        try:
+            self.check()
+            call()
+        except Exception as error:
+            log.warning("job %s %s: the database does not answer (%s)", job_id, otherwise, error)
 
     def start_sweeping(self) -> None:
         """Look for forgotten jobs at intervals, from a thread of its own, until `close`."""
@@ -80,6 +106,7 @@ class JobQueue:
             self._sweeper.join()
         self._client.destroy()
         self._engine.dispose()
+        self._impatient.dispose()
 
     def sweep(self, *, is_thorough: bool = True) -> None:
         """Put in every job without a place, and free those whose worker is dead.
@@ -89,6 +116,7 @@ class JobQueue:
         is_thorough : bool
             Also compare every unfinished row with its workflow, which takes long when thousands wait.
         """
+        self.check()
         for job in self._attempts.unqueued():
             self.put(job)
         silent = self._workers.silent()

@@ -6,6 +6,7 @@ import sqlite3
 import time
 from collections.abc import Iterator
 from contextlib import contextmanager
+from functools import partial
 from pathlib import Path
 from typing import Any, Final
 
@@ -16,32 +17,41 @@ from alembic.runtime.migration import MigrationContext
 from alembic.script import ScriptDirectory
 
 _MIGRATIONS = Path(__file__).parent / "migrations"
-_BUSY_MILLISECONDS = 30_000
+#: How long a process that nobody waits for waits for its turn to write.
+_PATIENCE_SECONDS: Final = 30.0
 #: The first SQLite that knows fractions of a second, which the queue engine asks for on Python 3.12 and later.
 _SUBSECOND_SQLITE: Final = (3, 42)
 
 
-def make_engine(url: str) -> sa.Engine:
+def make_engine(url: str, *, patience_seconds: float = _PATIENCE_SECONDS) -> sa.Engine:
     """Make an engine; with SQLite one that loses nothing and waits for its turn to write.
 
-    Write-ahead log, full synchronisation, 30 s of patience for a lock, and transactions that take the write lock when
-    they begin: one that reads first and writes later could not get it any more.
+    Write-ahead log, full synchronisation, patience for a lock, and transactions that take the write lock when they
+    begin: one that reads first and writes later could not get it any more.
+
+    Parameters
+    ----------
+    url : str
+        Of SQLAlchemy.
+    patience_seconds : float
+        How long a transaction waits for a lock that another process holds.
     """
-    engine = sa.create_engine(url)
+    # Threads bound the number of connections: those that wait to write must not keep others from reading.
+    engine = sa.create_engine(url, max_overflow=-1)
     if engine.dialect.name == "sqlite":
-        sa.event.listen(engine, "connect", _prepare_connection)
+        sa.event.listen(engine, "connect", partial(_prepare_connection, patience_seconds))
         sa.event.listen(engine, "begin", _begin)
     return engine
 
 
-def _prepare_connection(connection: Any, record: object) -> None:
+def _prepare_connection(patience_seconds: float, connection: Any, record: object) -> None:
     if isinstance(connection, sqlite3.Connection):
         # The driver would begin transactions on its own, and too late.
         connection.isolation_level = None
         if sqlite3.sqlite_version_info < _SUBSECOND_SQLITE:
             connection.create_function("unixepoch", 1, _unixepoch)
     cursor = connection.cursor()
-    cursor.execute(f"PRAGMA busy_timeout={_BUSY_MILLISECONDS}")
+    cursor.execute(f"PRAGMA busy_timeout={round(1000 * patience_seconds)}")
     cursor.execute("PRAGMA journal_mode=WAL")
     cursor.execute("PRAGMA synchronous=FULL")
     cursor.execute("PRAGMA foreign_keys=ON")
@@ -65,10 +75,12 @@ class Database:
     ----------
     url : str
         Of SQLAlchemy.
+    patience_seconds : float
+        How long a transaction waits for its turn to write.
     """
 
-    def __init__(self, url: str) -> None:
-        self.engine = make_engine(url)
+    def __init__(self, url: str, *, patience_seconds: float = _PATIENCE_SECONDS) -> None:
+        self.engine = make_engine(url, patience_seconds=patience_seconds)
         self._reading = self.engine.execution_options(fallow_read=True)
 
     @contextmanager

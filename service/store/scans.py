@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import datetime
 from typing import Any
 
@@ -38,11 +38,14 @@ class ScanStore:
         self._database = database
 
     def add(self, scan: ScanRecord) -> ScanRecord:
-        """Write a row; when the same content of the same owner is there already, return that one instead."""
+        """Write a row; when the same content of the same owner is there already, that one takes the label, if any."""
         with self._database.write() as connection:
             there = _by_content(connection, scan.owner, scan.sha256)
-            if there is not None:
+            if there is not None and scan.label in {None, there.label}:
                 return there
+            if there is not None:
+                connection.execute(sa.update(scans).where(scans.c.id == there.id).values(label=scan.label))
+                return replace(there, label=scan.label)
             connection.execute(sa.insert(scans).values(**scan.__dict__))
         return scan
 

@@ -57,6 +57,7 @@ def test_health_tells_what_is_wrong(client: Caller) -> None:
     for name in ("queue.sqlite", "queue.sqlite-wal", "queue.sqlite-shm"):
         (client.parts.settings.data / name).unlink(missing_ok=True)
     client.parts.queue._engine.dispose()
+    client.parts.queue._impatient.dispose()
     (client.parts.settings.data / "queue.sqlite").mkdir()
     answer = client.get("/health/ready")
     assert answer.status_code == 503

@@ -144,6 +144,9 @@ def test_order_with_wait_answers_with_the_finished_job(
     thread.join()
     assert answer.status_code == 200
     assert answer.json()["state"] == "dismissed"
+    assert answer.headers["location"] == f"/v1/jobs/{answer.json()['id']}"
+    assert answer.headers["preference-applied"] == "wait=30"
+    assert "retry-after" not in answer.headers
 
 
 def test_dismissed_job_stays_so(client: Caller, order: Order, runner: JobRunner) -> None:
@@ -195,6 +198,7 @@ def test_unfinished_job_cannot_be_deleted(client: Caller, order: Order) -> None:
         ({"settings": {"coil_compression": {"coils": 9}}}, "/settings/coil_compression", "9 coils"),
         ({"settings": {"coil_maps": "supplied"}}, "/settings/coil_maps", "/sensitivity"),
         ({"priority": "asap"}, "/priority", "urgent"),
+        ({"label": "a\x1b[2Jb"}, "/label", "control characters"),
         ({"label": ""}, "/label", "at least 1"),
         ({"comparison": {}}, "/comparison", "unknown"),
     ],

@@ -115,6 +115,13 @@ def test_range_beyond_the_end_is_refused(shared: Caller, done: str) -> None:
     assert answer.headers["content-type"] == "application/problem+json"
 
 
+def test_range_partly_beyond_the_end_is_answered_in_part(shared: Caller, done: str) -> None:
+    """RFC 9110, section 14.2: a set of ranges is satisfiable when one of them is."""
+    answer = shared.get(f"{done}/image.h5", headers={"Range": "bytes=0-1,99999999-"})
+    assert answer.status_code == 206
+    assert answer.content == shared.get(f"{done}/image.h5").content[:2]
+
+
 def test_range_of_another_version_is_not_mixed_in(shared: Caller, done: str) -> None:
     etag = shared.get(f"{done}/image.h5").headers["etag"]
     ask = {"Range": "bytes=0-9"}

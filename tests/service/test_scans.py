@@ -53,7 +53,10 @@ def test_same_content_is_the_same_scan(
     first = client.post("/v1/scans", content=content, headers=HEADERS)
     again = client.post("/v1/scans", params={"label": "other"}, content=content, headers=HEADERS)
     assert again.status_code == 200
-    assert again.json() == first.json()
+    assert again.json() == {**first.json(), "label": "other"}
+    assert client.get(first.headers["location"]).json()["label"] == "other"
+    unnamed = client.post("/v1/scans", content=content, headers=HEADERS)
+    assert unnamed.json()["label"] == "other"
     assert again.headers["location"] == first.headers["location"]
     assert len(_left_behind(settings)) == 2
 
@@ -64,6 +67,33 @@ def test_preview_is_a_picture(client: Caller, scan: dict[str, Any]) -> None:
     assert answer.headers["content-type"] == "image/png"
     assert answer.content.startswith(b"\x89PNG")
     assert CAUTION.encode() in answer.content
+
+
+def test_preview_knows_ranges_conditions_and_digest(client: Caller, scan: dict[str, Any]) -> None:
+    path = f"/v1/scans/{scan['id']}/preview.png"
+    whole = client.get(path)
+    digest = base64.b64encode(hashlib.sha256(whole.content).digest()).decode()
+    assert whole.headers["repr-digest"] == f"sha-256=:{digest}:"
+    part = client.get(path, headers={"Range": "bytes=0-3"})
+    assert (part.status_code, part.content) == (206, whole.content[:4])
+    beyond = client.get(path, headers={"Range": "bytes=99999999-"})
+    assert (beyond.status_code, beyond.headers["content-type"]) == (416, "application/problem+json")
+    assert client.get(path, headers={"Range": "bytes=a-b"}).status_code == 200
+    assert client.get(path, headers={"If-None-Match": whole.headers["etag"]}).status_code == 304
+    assert client.head(path).headers["content-length"] == str(len(whole.content))
+
+
+def test_label_with_control_characters_is_refused(shared: Caller, make_scan: MakeScan) -> None:
+    answer = shared.post("/v1/scans", params={"label": "a\nb"}, content=make_scan(), headers=HEADERS)
+    assert answer.status_code == 422
+    assert answer.json()["errors"][0]["parameter"] == "label"
+    assert "control characters" in answer.json()["detail"]
+
+
+def test_repeated_query_parameter_is_refused(shared: Caller) -> None:
+    answer = shared.get("/v1/scans?limit=1&limit=2")
+    assert answer.status_code == 400
+    assert answer.json()["errors"] == [{"parameter": "limit", "detail": "given more than once"}]
 
 
 def test_deleted_scan_is_gone(client: Caller, scan: dict[str, Any], settings: ServiceSettings) -> None:
@@ -245,6 +275,9 @@ def test_list_goes_page_by_page(client: Caller, make_scan: MakeScan) -> None:
         ({"state": "lost"}, 422, "state"),
         ({"created_after": "yesterday"}, 422, "created_after"),
         ({"created_after": "2026-01-01T00:00:00"}, 422, "created_after"),
+        ({"created_after": "2026"}, 422, "created_after"),
+        ({"created_before": "1767225600.5"}, 422, "created_before"),
+        ({"created_before": "2026-01-01"}, 422, "created_before"),
         ({"colour": "red"}, 400, "colour"),
     ],
 )
