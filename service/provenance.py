@@ -14,7 +14,7 @@ from typing import Any, Final
 from pydantic import BaseModel
 
 #: Packages whose version can change an image.
-_PACKAGES: Final = ("numpy", "scipy", "PyWavelets", "h5py", "pydantic", "pillow")
+_PACKAGES: Final = ("numpy", "scipy", "PyWavelets", "h5py", "numba", "pydantic", "pillow")
 
 
 def fallow_version() -> str:
@@ -65,7 +65,11 @@ def add_duration(image: Path, report: dict[str, Any], seconds: float) -> None:
     """
     import h5py
 
-    report["provenance"] = {**report["provenance"], "duration_seconds": round(seconds, 3)}
+    report["provenance"] = {
+        **report["provenance"],
+        "settings": report["settings"],
+        "duration_seconds": round(seconds, 3),
+    }
     with h5py.File(image, "r+") as file:
         file.attrs["report"] = json.dumps(report, allow_nan=False)
         file.attrs["provenance"] = json.dumps(report["provenance"], allow_nan=False)

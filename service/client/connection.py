@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 import tempfile
+import unicodedata
 import uuid
 from collections.abc import Iterator, Mapping
 from functools import partial
@@ -54,6 +55,11 @@ class Client:
                 f"{address!r} is no address of a service: expected http://HOST:PORT or https://HOST."
             )
         found = token or client_token(is_local=is_loopback(address))
+        if found and not all("!" <= character <= "~" for character in found):
+            raise InputRefused(
+                "The token is not well formed: expected printable ASCII characters without spaces; give it as it "
+                "stands in the token file."
+            )
         self._transport = Transport(address, found, patience=patience)
 
     @property
@@ -104,11 +110,12 @@ class Client:
         Raises
         ------
         InputRefused
-            The file is missing, or the arrays make no scan.
+            The file is missing, the arrays make no scan, or the label is none; nothing was sent.
         RequestRefused
             The service refuses the scan or the settings; the exception carries the problem details.
         ServiceUnreachable
         """
+        _check_label(label)
         sent = self.upload(scan, label=label, progress=progress)
         return self.reconstruct(str(sent["id"]), settings, label=label, priority=priority)
 
@@ -213,3 +220,10 @@ class Client:
             if page.get("next") is None:
                 return
             params["cursor"] = str(page["next"])
+
+
+def _check_label(label: str | None) -> None:
+    if label is not None and not 1 <= len(label) <= 200:
+        raise InputRefused(f"The label has {len(label)} characters: expected 1 to 200, or none at all.")
+    if label is not None and any(unicodedata.category(character) == "Cc" for character in label):
+        raise InputRefused("The label holds control characters such as line breaks: leave them out.")

@@ -8,6 +8,7 @@ import os
 import shutil
 import signal
 import tempfile
+import time
 from collections.abc import Iterator, Mapping
 from contextlib import ExitStack, contextmanager
 from pathlib import Path
@@ -18,7 +19,7 @@ from recon.pipeline import reconstruct_file
 from recon.settings import parse_settings
 from service.pictures import result_png
 from service.progress import ProgressLine
-from service.provenance import collect
+from service.provenance import add_duration, collect
 
 
 def reconstruct_to_files(
@@ -53,10 +54,12 @@ def reconstruct_to_files(
             for path in (image, report, picture)
             if path is not None
         }
+        started = time.monotonic()
         with ProgressLine() as line:
             found: dict[str, Any] = reconstruct_file(
                 scan, scratch[image], checked, progress=line.update, provenance=collect(sha256, checked)
             )
+        add_duration(scratch[image], found, time.monotonic() - started)
         if report is not None:
             text = json.dumps(found, indent=2, ensure_ascii=False, allow_nan=False)
             scratch[report].write_text(text + "\n", encoding="utf-8")

@@ -51,7 +51,9 @@ def add_commands(commands: _Commands) -> None:
     for command, run in runs.items():
         command.add_argument("--url", help="address of the service (default: FALLOW_URL, or this machine)")
         command.add_argument(
-            "--token", help="access token (default: FALLOW_TOKEN, or the local data folder's)"
+            "--token",
+            help="access token, which the process list shows to others: better FALLOW_TOKEN, or the local data "
+            "folder's (the defaults)",
         )
         command.add_argument("--json", action="store_true", help="print JSON for scripts")
         command.set_defaults(run=run)
@@ -59,7 +61,11 @@ def add_commands(commands: _Commands) -> None:
 
 def run_submit(arguments: argparse.Namespace) -> int:
     """Send a scan, ask for its image, and wait for it when told so."""
+    from recon.settings import parse_settings
+
     settings = read_settings(arguments.settings)
+    # Before anything is sent: a refused order would leave its scan with the service.
+    parse_settings(settings)
     with _client(arguments) as client:
         job = client.submit(
             arguments.scan, settings, label=arguments.label, priority=arguments.priority, progress=True
@@ -114,8 +120,12 @@ def run_job(arguments: argparse.Namespace) -> int:
 
 def run_collect(arguments: argparse.Namespace) -> int:
     """Fetch the results of a finished job."""
+    from service.client import JobFailed
+
     with _client(arguments) as client:
         job = client.job(arguments.id)
+        if job.is_finished and job.state != "successful":
+            raise JobFailed(job.id, job.state, job.facts.get("error"))
         paths = job.save(arguments.output)
     if arguments.json:
         print_json({"id": job.id, "files": [str(path) for path in paths], "caution": job.facts["caution"]})

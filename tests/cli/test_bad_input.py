@@ -9,6 +9,7 @@ import pytest
 
 from service.cli import main
 from tests.cli.bad_scans import BAD_SCANS, good
+from tests.client.scripted import answer, scripted
 
 
 def refused(capsys: pytest.CaptureFixture[str], *arguments: str | Path) -> str:
@@ -123,3 +124,45 @@ def test_good_scan_is_inspected(tmp_path: Path, capsys: pytest.CaptureFixture[st
     assert main(["inspect", str(tmp_path / "scan.h5"), "--json"]) == 0
     found = json.loads(capsys.readouterr().out)
     assert found["axes"] == {"coil": 4, "ky": 32, "kx": 24}
+
+
+@pytest.mark.parametrize("token", ["gr\u00fcn", "two\nlines", "a b"])
+def test_token_that_cannot_be_sent(capsys: pytest.CaptureFixture[str], token: str) -> None:
+    assert "token" in refused(capsys, "jobs", "--url", "http://127.0.0.1:9", "--token", token)
+
+
+@pytest.mark.parametrize("label", ["", "a\nb", "x" * 201])
+def test_label_is_refused_before_anything_is_sent(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str], label: str
+) -> None:
+    good(tmp_path / "scan.h5")
+    with scripted() as service:
+        arguments = "--url", service.url, "--token", "t", "--label", label
+        assert "label" in refused(capsys, "submit", tmp_path / "scan.h5", *arguments)
+    assert service.received == []
+
+
+def test_settings_are_refused_before_anything_is_sent(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    good(tmp_path / "scan.h5")
+    (tmp_path / "settings.json").write_text('{"tolerance": 2}')
+    with scripted() as service:
+        arguments = "--url", service.url, "--token", "t", "--settings", tmp_path / "settings.json"
+        assert "tolerance" in refused(capsys, "submit", tmp_path / "scan.h5", *arguments)
+    assert service.received == []
+
+
+@pytest.mark.parametrize("state", ["failed", "dismissed"])
+def test_job_without_results_is_exit_code_3(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str], state: str
+) -> None:
+    error = {"title": "t", "detail": "The worker died."} if state == "failed" else None
+    job = {"id": "j1", "state": state, "progress": 0.5, "caution": "c", "error": error}
+    with scripted(answer(job)) as service:
+        arguments = ["--url", service.url, "--token", "t", "-o", str(tmp_path / "out")]
+        assert main(["collect", "j1", *arguments]) == 3
+    out, err = capsys.readouterr()
+    assert (out, err.count("\n")) == ("", 1)
+    assert state in err
+    assert not (tmp_path / "out").exists()

@@ -44,6 +44,8 @@ def test_three_files_and_a_summary(tmp_path: Path, capsys: pytest.CaptureFixture
     result = read_image(files[0])
     assert result.image.shape == (ROWS, COLUMNS)
     assert result.provenance["scan_sha256"]
+    assert result.provenance["duration_seconds"] > 0
+    assert result.provenance["settings"] == result.report["settings"]
     report = json.loads(Path(files[1]).read_text())
     assert report == result.report
     with Image.open(files[2]) as picture:

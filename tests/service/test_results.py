@@ -51,7 +51,9 @@ def test_image_is_complete(shared: Caller, shared_scan: dict[str, Any], done: st
     assert result.provenance["version"] == fallow_version()
     assert result.provenance["duration_seconds"] > 0
     assert result.provenance["packages"]["numpy"]
-    assert result.provenance["settings"] == shared.get(done).json()["settings"]
+    assert result.provenance["packages"]["numba"]
+    assert result.provenance["settings"] == result.report["settings"]
+    assert result.provenance["settings"]["tikhonov_strength"] != "auto", "as resolved"
 
 
 def test_report_is_json_with_caution(shared: Caller, done: str) -> None:
