@@ -166,7 +166,7 @@ def parse_settings(values: Mapping[str, Any] | None) -> Settings:
 def _problems(error: ValidationError) -> list[SettingsProblem]:
     problems: dict[str, str] = {}
     for item in error.errors():
-        name = str(item["loc"][0]) if item["loc"] else ""
+        name = str(item["loc"][0]).replace("~", "~0").replace("/", "~1") if item["loc"] else ""
         detail = item["msg"].removeprefix("Value error, ")
         if item["type"] == "extra_forbidden":
             detail = f"unknown setting; accepted are {', '.join(Settings.model_fields)}"

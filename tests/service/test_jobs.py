@@ -193,6 +193,7 @@ def test_unfinished_job_cannot_be_deleted(client: Caller, order: Order) -> None:
         ({"scan": 7}, "/scan", "string"),
         ({"settings": {"tolerance": 2}}, "/settings/tolerance", "less than 1"),
         ({"settings": {"replicas": 5}}, "/settings/replicas", "unknown setting"),
+        ({"settings": {"a~/b": 1}}, "/settings/a~0~1b", "unknown setting"),
         ({"settings": {"method": "magic"}}, "/settings/method", "zero-filled"),
         ({"settings": []}, "/settings", "object"),
         ({"settings": {"coil_compression": {"coils": 9}}}, "/settings/coil_compression", "9 coils"),
