@@ -83,7 +83,7 @@ def long_job_scan(path: Path) -> Path:
     return path
 
 
-LONG = {"tolerance": 1e-12, "max_iterations": 100_000}
+LONG = {"tolerance": 1e-6, "max_iterations": 100_000}
 
 
 def test_file_to_image(client: Client, tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
