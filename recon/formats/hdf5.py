@@ -18,6 +18,7 @@ from recon.errors import InvalidScan
 #: gzip, shuffle, fletcher32, lzf: the filters that h5py itself carries.
 ACCEPTED_FILTERS = {1: "gzip", 2: "shuffle", 3: "fletcher32", 32000: "lzf"}
 LARGEST_DATASET_BYTES = 64 * 2**30
+_LINKS = {h5py.ExternalLink: "an external link, into another file", h5py.SoftLink: "a soft link"}
 
 
 def open_file(path: Path | str) -> h5py.File:
@@ -53,7 +54,7 @@ def dataset(file: h5py.File, name: str) -> h5py.Dataset | None:
             return None
         if not isinstance(link, h5py.HardLink):
             raise InvalidScan(
-                f"/{name} is a {type(link).__name__}; accepted are datasets stored in the file itself"
+                f"/{name} is {_LINKS.get(type(link), 'a link')}; accepted are datasets stored in the file itself"
             )
         found = file[name]
         if not isinstance(found, h5py.Dataset):
