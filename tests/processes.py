@@ -2,12 +2,18 @@
 
 from __future__ import annotations
 
+import signal
 import socket
 import subprocess
 import time
 from pathlib import Path
 
 import httpx
+
+
+def heed_interrupts() -> None:
+    """For `preexec_fn`: SIGINT works again, also where the tests run in the background of a shell, which ignores it."""
+    signal.signal(signal.SIGINT, signal.SIG_DFL)
 
 
 def free_port() -> int:

@@ -18,6 +18,7 @@ from recon.caution import CAUTION
 from recon.formats import read_image
 from service.cli import main
 from tests.cli.bad_scans import COLUMNS, ROWS, good, kspace, mask, write
+from tests.processes import heed_interrupts
 
 ROOT = Path(__file__).parents[2]
 LONG = '{"tolerance": 1e-6, "max_iterations": 100000}'
@@ -109,6 +110,7 @@ def test_interruption_leaves_nothing_behind(tmp_path: Path, number: signal.Signa
     process = subprocess.Popen(
         [sys.executable, "-m", "service.cli", "reconstruct", "scan.h5", *files],
         cwd=tmp_path, env={**os.environ, "PYTHONPATH": str(ROOT)}, stderr=subprocess.PIPE, text=True,
+        preexec_fn=heed_interrupts,
     )  # fmt: skip
     assert process.stderr is not None
     for line in process.stderr:

@@ -15,6 +15,7 @@ import pytest
 from PIL import Image
 
 from recon.caution import CAUTION
+from tests.processes import heed_interrupts
 from tests.readme import ROOT, blocks
 
 
@@ -114,7 +115,7 @@ def test_quickstart_ends_with_files_and_nothing_running(checkout: Path) -> None:
 def test_quickstart_interrupted_leaves_nothing_running(checkout: Path) -> None:
     process = subprocess.Popen(
         ["deploy/quickstart.sh"], cwd=checkout, env=environment(), stdout=subprocess.PIPE, stderr=subprocess.STDOUT,
-        text=True, start_new_session=True,
+        text=True, start_new_session=True, preexec_fn=heed_interrupts,
     )  # fmt: skip
     assert process.stdout is not None
     for line in process.stdout:
