@@ -1,10 +1,12 @@
 """The measurement: coil maps, Fourier transform, sampling.
 
-    E u = P F (S_c u),  c = 1 ... C
+    E u = w P F (S_c u),  c = 1 ... C
 
 for a plane, a series of planes that share maps (2-D + time), or a volume. Where all maps are zero (outside the object)
 the data say nothing; there the image is measured once as zero with unit noise, like one more coil that sees the outside
 alone. That keeps the problem well posed without a hard edge.
+
+w is one, or sqrt(n / mean n) where positions were measured unequally often: there the data are means of n samples.
 
 Where every readout is complete, the transform along the columns leaves the iteration: data are transformed along the
 columns once, and F acts along the other axes alone.
@@ -37,6 +39,8 @@ class Encoding(LinearOperator):
         True where sampled.
     depth : {"series", "volume"}
         Meaning of the slab axis, where there is one.
+    weights : float, shape of the mask, optional
+        w at the sampled positions; one everywhere where left out.
 
     Attributes
     ----------
@@ -44,44 +48,53 @@ class Encoding(LinearOperator):
         Transformed axes; without -1 the range is hybrid space (columns in image space).
     """
 
-    def __init__(self, maps: NDArray[Any], mask: NDArray[np.bool_], depth: Depth = "volume") -> None:
+    def __init__(
+        self,
+        maps: NDArray[Any],
+        mask: NDArray[np.bool_],
+        depth: Depth = "volume",
+        weights: NDArray[Any] | None = None,
+    ) -> None:
         self.maps = np.ascontiguousarray(maps)
         is_plane = maps.ndim == 3
         self.depth: Depth = "series" if is_plane else depth
-        has_complete_readouts = bool((mask == mask[..., :1]).all())
+        real = maps.real.dtype
+        weight = mask.astype(real) if weights is None else np.where(mask, weights, 0).astype(real)
+        has_complete_readouts = bool((weight == weight[..., :1]).all())
         self.axes = (
             *((-3,) if self.depth == "volume" else ()), -2, *(() if has_complete_readouts else (-1,))
         )  # fmt: skip
         self.domain_shape = maps.shape[1:] if is_plane else mask.shape
         self.range_shape = (len(maps), *self.domain_shape)
-        self._mask = mask[..., :1] if has_complete_readouts else mask
+        self._weight = weight[..., :1] if has_complete_readouts else weight
         # A shift of the image multiplies k-space by a phase, which the mask leaves alone: so the normal operator
-        # needs no shifts of the image, only the mask in the order of the plain FFT.
-        real = maps.real.dtype
-        plain = np.fft.ifftshift(self._mask, axes=self.axes).astype(real)
+        # needs no shifts of the image, only the mask (the squared weights) in the order of the plain FFT.
+        plain = np.fft.ifftshift(self._weight**2, axes=self.axes)
         self._plain_mask = np.ascontiguousarray(plain if not is_plane else plain[np.newaxis])
         self._deep_maps = self.maps[:, np.newaxis] if is_plane else self.maps
         outside = ~np.any(maps != 0, axis=0)
         self._outside = np.broadcast_to(outside, self.domain_shape).astype(real) if outside.any() else None
 
     def to_range(self, kspace: NDArray[Any]) -> NDArray[Any]:
-        """Masked k-space, coil first, in the space that `forward` maps to."""
+        """Weighted k-space, coil first and zero where not sampled, in the space that `forward` maps to."""
         data = kspace if -1 in self.axes else inverse_transform(kspace, (-1,))
-        return np.where(self._mask, data, 0)
+        return np.where(self._weight != 0, data * self._weight, 0)
 
     def to_kspace(self, data: NDArray[Any]) -> NDArray[Any]:
         """The inverse of `to_range`: k-space, coil first."""
-        return data if -1 in self.axes else transform(data, (-1,))
+        kspace = data if -1 in self.axes else transform(data, (-1,))
+        weight = self._weight
+        return np.asarray(kspace * np.divide(1, weight, out=np.zeros_like(weight), where=weight != 0))
 
     def forward(self, x: NDArray[Any]) -> NDArray[Any]:
         """Image to sampled data, zero where not sampled."""
-        return transform(self.maps * x, self.axes) * self._mask
+        return np.asarray(transform(self.maps * x, self.axes) * self._weight)
 
     def adjoint(self, y: NDArray[Any]) -> NDArray[Any]:
         """Sampled data to image."""
         out = np.zeros(self.domain_shape, y.dtype)
         for map_, samples in zip(self.maps, y, strict=True):
-            image = inverse_transform(samples * self._mask, self.axes)
+            image = inverse_transform(samples * self._weight, self.axes)
             image *= map_.conj()
             out += image
         return out
@@ -112,9 +125,9 @@ class Encoding(LinearOperator):
         kernels.add_conjugate(_real(map_), _real(image), _real(out))
 
     def squared_norm_bound(self) -> float:
-        """Upper bound of ||E||^2, the outside included: max over pixels of sum_c |S_c|^2 (P and F have norm one)."""
+        """Upper bound of ||E||^2, the outside included: max over pixels of sum_c |S_c|^2, times the largest w^2."""
         power = sum(np.abs(map_).astype(np.float64) ** 2 for map_ in self.maps)
-        largest = float(np.max(power))
+        largest = float(np.max(power)) * float(np.max(self._weight)) ** 2
         return largest if self._outside is None else max(largest, 1.0)
 
 

@@ -22,6 +22,14 @@ def _encoding(coils: int, shape: tuple[int, int], kind: str, dtype: type) -> Enc
     return Encoding(coil_maps(coils, shape, dtype), mask)
 
 
+def _weighted(shape: tuple[int, int], *, per_line: bool, dtype: type) -> Encoding:
+    """Positions measured unequally often, some not at all."""
+    counts = np.random.default_rng(5).integers(0, 5, (shape[0], 1) if per_line else shape)
+    mask = np.broadcast_to(counts > 0, shape)
+    weights = np.broadcast_to(np.sqrt(counts / counts[counts > 0].mean()), shape)
+    return Encoding(coil_maps(3, shape, dtype), mask, weights=weights)
+
+
 #: name and how to make the operator in a given complex precision.
 REGISTRY: dict[str, Callable[[type], LinearOperator]] = {
     "fourier even": lambda dtype: Fourier((12, 16)),
@@ -40,6 +48,8 @@ REGISTRY: dict[str, Callable[[type], LinearOperator]] = {
     "encoding lines odd": lambda dtype: _encoding(3, (15, 11), "lines", dtype),
     "encoding points even": lambda dtype: _encoding(4, (12, 16), "points", dtype),
     "encoding points odd": lambda dtype: _encoding(2, (13, 9), "points", dtype),
+    "encoding lines weighted": lambda dtype: _weighted((15, 12), per_line=True, dtype=dtype),
+    "encoding points weighted": lambda dtype: _weighted((12, 13), per_line=False, dtype=dtype),
     "encoding one coil": lambda dtype: _encoding(1, (11, 16), "lines", dtype),
 }
 
