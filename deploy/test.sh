@@ -10,7 +10,7 @@ make_environment "$environment" deploy/requirements-test.txt deploy/requirements
 bin="$PWD/$environment/bin"
 export PATH="$bin:$PATH"
 # The tests start services of their own; whatever the caller uses stays out of them.
-unset FALLOW_DATA FALLOW_URL FALLOW_TOKEN
+unset FALLOW_DATA FALLOW_URL FALLOW_TOKEN FALLOW_THREADS
 
 if [ $# -eq 0 ]; then
     "$bin/ruff" check .

@@ -3,12 +3,14 @@
     read -> inspect -> whiten -> crop readout oversampling -> compress coils -> coil maps -> solve -> combine
     -> consistency -> write
 
-Memory hardly grows with the number of planes: one (or one series of frames that are tied together) is read, solved,
-judged and written before the next.
+Memory hardly grows with the number of planes: one (or one series of frames that are tied together) for each thread is
+read, solved and judged; results are written in order.
 """
 
 from __future__ import annotations
 
+import threading
+from collections import OrderedDict
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from pathlib import Path
@@ -16,12 +18,14 @@ from typing import Any, Final, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
+from threadpoolctl import threadpool_limits
 
 from recon.coils.maps import CoilMaps
 from recon.consistency import ResidualFigures
 from recon.errors import InvalidScan
 from recon.formats import ImageWriter, open_scan
-from recon.plane import reconstruct_together
+from recon.parallel import in_order
+from recon.plane import PlaneResult, reconstruct_together
 from recon.preparation import Preparation, prepare
 from recon.report import SolverFigures, build_report
 from recon.scan import PlaneIndex, Scan
@@ -70,6 +74,7 @@ def reconstruct(
     *,
     progress: Progress | None = None,
     provenance: Mapping[str, Any] | None = None,
+    threads: int = 1,
 ) -> Reconstruction:
     """Reconstruct a scan in memory.
 
@@ -85,6 +90,8 @@ def reconstruct(
     progress : callable, optional
     provenance : mapping, optional
         Put into the report as it is.
+    threads : int
+        Planes (or series) worked on at once; the result does not depend on it.
 
     Returns
     -------
@@ -104,8 +111,9 @@ def reconstruct(
             array[tuple(index._asdict()[axis] for axis in scan.outer_axes)] = plane
 
     tell = _Teller(progress)
-    preparation = prepare(scan, settings or Settings(), tell.preparing)
-    report = _run(preparation, Memory(), tell, provenance or {})
+    with _one_thread_for_each_plane():
+        preparation = prepare(scan, settings or Settings(), tell.preparing)
+        report = _run(preparation, Memory(), tell, provenance or {}, threads)
     tell("write", 1.0)
     return Reconstruction(arrays["image"], arrays["residual_image"], scan.image_axes, report)
 
@@ -117,6 +125,7 @@ def reconstruct_file(
     *,
     progress: Progress | None = None,
     provenance: Mapping[str, Any] | None = None,
+    threads: int = 1,
 ) -> dict[str, Any]:
     """Reconstruct a scan file into an image file, see `reconstruct`.
 
@@ -134,10 +143,10 @@ def reconstruct_file(
     if Path(image_path).exists() and Path(image_path).samefile(scan_path):
         raise InvalidScan(f"the image would overwrite the scan {Path(scan_path).name}; give it another path")
     tell = _Teller(progress)
-    with open_scan(scan_path) as scan:
+    with _one_thread_for_each_plane(), open_scan(scan_path) as scan:
         preparation = prepare(scan, settings or Settings(), tell.preparing)
         with ImageWriter(image_path, scan, (preparation.shape[0], preparation.image_columns)) as writer:
-            report = _run(preparation, writer, tell, provenance or {})
+            report = _run(preparation, writer, tell, provenance or {}, threads)
             tell("write", _PLANES_DONE)
             writer.finish(report, provenance or {})
     tell("write", 1.0)
@@ -145,68 +154,136 @@ def reconstruct_file(
 
 
 def _run(
-    preparation: Preparation, sink: Sink, tell: _Teller, provenance: Mapping[str, Any]
+    preparation: Preparation, sink: Sink, tell: _Teller, provenance: Mapping[str, Any], threads: int
 ) -> dict[str, Any]:
-    scan = preparation.scan
-    residuals = ResidualFigures(preparation.shape, preparation.whitening, scan.axes)
+    residuals = ResidualFigures(preparation.shape, preparation.whitening, preparation.scan.axes)
     solver = SolverFigures()
     groups = preparation.groups()
-    shares: dict[int, float] = {}
-    maps: CoilMaps | None = None
-    current: int | None = None
-    for done, group in enumerate(groups):
-        tell.group(done, len(groups))
-        position = group[0].slice
-        if position != current and preparation.map_method is not None:
-            tell("coil-maps")
-            maps = preparation.map_maker().make(position, preparation.whitened_blocks(position))
-            shares[position] = maps.object_share
-        current = position
+    shelf = _MapShelf(preparation, tell, threads + 1)
+    tell.begin(len(groups))
+
+    def work(group: list[PlaneIndex]) -> _Work:
+        maps = shelf.maps_of(group[0].slice)
         planes = [preparation.load(index) for index in group]
         tell("solve")
-        results = reconstruct_together(preparation, maps, planes, tell.iteration(preparation.settings))
-        solver.see(group, results[0].solution)
+        results = reconstruct_together(
+            preparation, maps, planes, tell.iteration(group[0], preparation.settings)
+        )
         tell("combine")
-        for index, (kspace, mask), result in zip(group, planes, results, strict=True):
+        return _Work(group, [mask for _, mask in planes], [kspace for kspace, _ in planes], results)
+
+    for done in in_order(work, groups, threads=threads):
+        solver.see(done.group, done.results[0].solution)
+        for index, kspace, mask, result in zip(
+            done.group, done.kspaces, done.masks, done.results, strict=True
+        ):
             tell("consistency")
             residuals.see(index, result.residuals, kspace, mask)
             tell("write")
             sink.write("image", index, result.image)
             sink.write("residual_image", index, result.residual_image)
-    return build_report(preparation, residuals, solver, shares, provenance)
+        tell.finished(done.group[0])
+    return build_report(preparation, residuals, solver, shelf.shares, provenance)
+
+
+def _one_thread_for_each_plane() -> threadpool_limits:
+    """Keep linear algebra to its caller's thread: threads are for planes, and its sums would depend on their number."""
+    return threadpool_limits(limits=1, user_api="blas")
+
+
+@dataclass(frozen=True)
+class _Work:
+    """Planes that were solved together, with what they were solved from."""
+
+    group: list[PlaneIndex]
+    masks: list[NDArray[np.bool_]]
+    kspaces: list[NDArray[Any]]
+    results: list[PlaneResult]
+
+
+class _MapShelf:
+    """Maps of the slices now worked on, made once by whichever thread needs them first."""
+
+    def __init__(self, preparation: Preparation, tell: _Teller, size: int) -> None:
+        self.preparation, self.tell, self.size = preparation, tell, size
+        self.shares: dict[int, float] = {}
+        self._kept: OrderedDict[int, CoilMaps] = OrderedDict()
+        self._locks: dict[int, threading.Lock] = {}
+        self._lock = threading.Lock()
+
+    def maps_of(self, position: int) -> CoilMaps | None:
+        """Maps of one slice; None for the coil-by-coil method, which needs none."""
+        if self.preparation.map_method is None:
+            return None
+        with self._lock:
+            lock = self._locks.setdefault(position, threading.Lock())
+        with lock:
+            maps = self._kept.get(position)
+            if maps is None:
+                self.tell("coil-maps")
+                blocks = self.preparation.whitened_blocks(position)
+                maps = self.preparation.map_maker().make(position, blocks)
+        with self._lock:
+            self.shares[position] = maps.object_share
+            self._kept[position] = maps
+            while len(self._kept) > self.size:
+                self._kept.popitem(last=False)
+        return maps
 
 
 class _Teller:
-    """Turns what happens in each stage into one fraction that only grows."""
+    """Turns what happens in each stage, in whichever thread, into one fraction that only grows."""
 
     def __init__(self, progress: Progress | None) -> None:
         self.progress = progress
         self.fraction = 0.0
-        self.start, self.width = _PREPARED, 0.0
+        self._lock = threading.RLock()
+        self._done, self._groups = 0, 1
+        self._within: dict[PlaneIndex, float] = {}
+        self._error: BaseException | None = None
 
     def __call__(self, stage: str, fraction: float | None = None) -> None:
-        if fraction is not None:
-            self.fraction = max(self.fraction, min(fraction, 1.0))
-        if self.progress is not None:
-            self.progress(stage, self.fraction)
+        with self._lock:
+            if self._error is not None:  # raised in another thread: the whole job is cancelled
+                raise self._error
+            if fraction is not None:
+                self.fraction = max(self.fraction, min(fraction, 1.0))
+            if self.progress is not None:
+                try:
+                    self.progress(stage, self.fraction)
+                except BaseException as error:
+                    self._error = error
+                    raise
 
     def preparing(self, stage: str, fraction: float) -> None:
         """Progress within the pass over all data, the first part of the job."""
         self(stage, _PREPARED * fraction)
 
-    def group(self, done: int, groups: int) -> None:
-        """A new plane, or series of planes, begins."""
-        self.width = (_PLANES_DONE - _PREPARED) / groups
-        self.start = _PREPARED + done * self.width
-        self.fraction = max(self.fraction, self.start)
+    def begin(self, groups: int) -> None:
+        """The groups of planes begin."""
+        self._groups = groups
+        self("coil-maps", _PREPARED)
 
-    def iteration(self, settings: Settings) -> Callable[[int, float], None]:
+    def finished(self, group: PlaneIndex) -> None:
+        """One more group, named by its first plane, is written."""
+        with self._lock:
+            self._done += 1
+            self._within.pop(group, None)
+            self._advance("write")
+
+    def iteration(self, group: PlaneIndex, settings: Settings) -> Callable[[int, float], None]:
         """Callback of the solver; the residual falls geometrically, so its logarithm tells how far the solve is."""
         goal = np.log(settings.tolerance)
 
         def tell(iteration: int, optimality: float) -> None:
             by_residual = np.log(min(max(optimality, settings.tolerance), 1.0)) / goal
             by_count = iteration / settings.max_iterations
-            self("solve", self.start + self.width * 0.95 * float(max(by_residual, by_count)))
+            with self._lock:
+                self._within[group] = 0.95 * float(max(by_residual, by_count))
+                self._advance("solve")
 
         return tell
+
+    def _advance(self, stage: str) -> None:
+        over = self._done + sum(self._within.values())
+        self(stage, _PREPARED + (_PLANES_DONE - _PREPARED) * over / self._groups)

@@ -60,6 +60,7 @@ def compute(order: dict[str, Any], teller: Teller) -> None:
     from recon.settings import parse_settings
     from service.pictures import result_png
     from service.provenance import add_duration, collect
+    from service.settings import computing_threads
     from service.store.files import seal
 
     settings = parse_settings(order["settings"])
@@ -67,7 +68,12 @@ def compute(order: dict[str, Any], teller: Teller) -> None:
     started = time.monotonic()
     provenance = collect(order["scan_sha256"], settings)
     report = reconstruct_file(
-        Path(order["scan"]), folder / IMAGE, settings, progress=teller.progress, provenance=provenance
+        Path(order["scan"]),
+        folder / IMAGE,
+        settings,
+        progress=teller.progress,
+        provenance=provenance,
+        threads=computing_threads(),
     )
     add_duration(folder / IMAGE, report, time.monotonic() - started)
     (folder / REPORT).write_text(json.dumps(report, ensure_ascii=False, allow_nan=False), encoding="utf-8")

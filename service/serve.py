@@ -21,7 +21,13 @@ from service.app import create_app
 from service.logs import configure_logging
 from service.process import how_it_ended, python_command
 from service.provenance import fallow_version
-from service.settings import LOCAL_HOSTS, ServiceSettings, SettingError, child_environment
+from service.settings import (
+    LOCAL_HOSTS,
+    ServiceSettings,
+    SettingError,
+    child_environment,
+    computing_threads,
+)
 
 log = logging.getLogger("fallow")
 
@@ -56,6 +62,7 @@ def run_service(settings: ServiceSettings, host: str, port: int, workers: int) -
 
 
 async def _serve(settings: ServiceSettings, host: str, port: int, workers: int) -> None:
+    threads = computing_threads(workers)
     app = create_app(settings)
     config = uvicorn.Config(
         app,
@@ -72,7 +79,7 @@ async def _serve(settings: ServiceSettings, host: str, port: int, workers: int) 
     try:
         async with app.router.lifespan_context(app):
             server = _Server(config, app)
-            supervisors = [asyncio.create_task(_keep_worker(settings)) for _ in range(workers)]
+            supervisors = [asyncio.create_task(_keep_worker(settings, threads)) for _ in range(workers)]
             address, taken = listener.getsockname()[:2]
             shown = f"[{address}]" if ":" in address else address
             log.info("Fallow %s listens on http://%s:%d", fallow_version(), shown, taken)
@@ -133,7 +140,7 @@ class _Server(uvicorn.Server):
         super().handle_exit(sig, frame)
 
 
-async def _keep_worker(settings: ServiceSettings) -> None:
+async def _keep_worker(settings: ServiceSettings, threads: int) -> None:
     """Run a worker, and another when it dies, until cancelled."""
     pause = 1.0
     while True:
@@ -141,7 +148,7 @@ async def _keep_worker(settings: ServiceSettings) -> None:
         worker = await asyncio.create_subprocess_exec(
             *python_command("service.worker", str(settings.data), str(os.getpid())),
             stdin=asyncio.subprocess.DEVNULL,
-            env=child_environment(),
+            env=child_environment(FALLOW_THREADS=str(threads)),
             # A key pressed in the terminal reaches the service alone, which then stops its workers in good order.
             start_new_session=True,
         )

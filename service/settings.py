@@ -169,6 +169,26 @@ def child_environment(**extra: str) -> dict[str, str]:
     return {**kept, **dict.fromkeys(threads, "1"), "PYTHONUNBUFFERED": "1", **extra}
 
 
+def computing_threads(workers: int = 1) -> int:
+    """Threads for each computing process: `FALLOW_THREADS`, else an equal share of the usable cores.
+
+    Parameters
+    ----------
+    workers : int
+        Processes that compute at once on this machine.
+
+    Raises
+    ------
+    SettingError
+    """
+    text = os.environ.get("FALLOW_THREADS", "").strip()
+    if not text:
+        return max(1, len(os.sched_getaffinity(0)) // max(1, workers))
+    if not text.isascii() or not text.isdigit() or not 1 <= int(text) <= 1024:
+        raise SettingError(f"FALLOW_THREADS is {text!r}; accepted is a whole number from 1 to 1024")
+    return int(text)
+
+
 def _bytes(variables: Mapping[str, str], name: str, default: int) -> int:
     text = variables.get(name, "").strip()
     if not text:

@@ -20,6 +20,7 @@ from recon.settings import parse_settings
 from service.pictures import result_png
 from service.progress import ProgressLine
 from service.provenance import add_duration, collect
+from service.settings import computing_threads
 
 
 def reconstruct_to_files(
@@ -57,7 +58,12 @@ def reconstruct_to_files(
         started = time.monotonic()
         with ProgressLine() as line:
             found: dict[str, Any] = reconstruct_file(
-                scan, scratch[image], checked, progress=line.update, provenance=collect(sha256, checked)
+                scan,
+                scratch[image],
+                checked,
+                progress=line.update,
+                provenance=collect(sha256, checked),
+                threads=computing_threads(),
             )
         add_duration(scratch[image], found, time.monotonic() - started)
         if report is not None:
