@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 #: k-space axes in canonical (C) order: `kx` is the readout, `ky` and `kz` are phase encodes.
-KSPACE_AXES: Final = ("frame", "slice", "contrast", "coil", "kz", "ky", "kx")
+KSPACE_AXES: Final = ("frame", "slice", "contrast", "average", "coil", "kz", "ky", "kx")
 #: image-space axes in canonical order.
 IMAGE_AXES: Final = ("frame", "slice", "contrast", "coil", "z", "y", "x")
 #: axes over which planes are reconstructed one by one.
@@ -22,7 +22,9 @@ OUTER_AXES: Final = ("frame", "slice", "contrast")
 #: label of an axis of length 2 that holds real and imaginary part.
 COMPLEX_AXIS: Final = "complex"
 
-_CANONICAL: Final = ("frame", "slice", "contrast", "coil", "sample", "kz", "ky", "kx", "z", "y", "x")
+_CANONICAL: Final = (
+    "frame", "slice", "contrast", "average", "coil", "sample", "kz", "ky", "kx", "z", "y", "x",
+)  # fmt: skip
 
 
 def canonical(axes: Sequence[str]) -> tuple[str, ...]:

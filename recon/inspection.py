@@ -12,13 +12,14 @@ from typing import Any, Final
 import numpy as np
 from numpy.typing import NDArray
 
+from recon.averages import Mean, Samples
 from recon.axes import LabelledArray
 from recon.caution import CAUTION
 from recon.coils.calibration import SMALLEST_BLOCK
 from recon.errors import InvalidScan
 from recon.findings import Finding
 from recon.formats.image_layout import voxel_size_mm
-from recon.sampling import SamplingFacts, readout_finding
+from recon.sampling import SamplingFacts, averages_finding, readout_finding
 from recon.scan import PlaneIndex, Scan, cropped_readout, readout_pattern
 
 #: magnitudes of k-space that single-precision arithmetic can square without harm.
@@ -37,8 +38,10 @@ class Inspection:
     axes : dict
         Length of every k-space axis.
     sampling : dict
-        `sampled_fraction`, `net_acceleration`, `nominal_acceleration`, `calibration` (rows, columns),
-        `peak_side_lobe`, `distinct_masks`, `varies_along_readout` (or along the columns of a phase-phase plane).
+        `sampled_fraction` (of the positions), `net_acceleration` (positions of all averages over samples),
+        `readouts` (of all planes and averages),
+        `nominal_acceleration`, `calibration` (rows, columns), `peak_side_lobe`, `distinct_masks`,
+        `varies_along_readout` (or along the columns of a phase-phase plane), `samples_per_position` (averages).
     objects : dict
         Which of the optional objects the scan has; rows and columns of `/reference` and `/sensitivity`, those of the
         reference without readout oversampling where the scan is solved without it.
@@ -66,38 +69,54 @@ class Inspection:
 
 
 class Inspector:
-    """Looks at planes one by one; `finish` turns what it saw into an `Inspection`."""
+    """Reads planes one by one and looks at each average; `finish` turns what it saw into an `Inspection`."""
 
     def __init__(self, scan: Scan) -> None:
         self.scan = scan
-        self.sampling = SamplingFacts(scan.plane_shape)
+        self.sampling = SamplingFacts(scan.plane_shape, scan.averages)
+        self.readouts = 0
         self.outside = 0
         self.outside_planes = 0
         self.empty_positions = 0
         self.empty_first: str | None = None
         self.largest = 0.0
 
-    def see(self, index: PlaneIndex, kspace: NDArray[np.complex64], mask: NDArray[np.bool_]) -> None:
-        """Take in one plane.
+    def read(self, index: PlaneIndex) -> Samples:
+        """Read one plane, look at it, and return the mean of its averages.
 
         Raises
         ------
         InvalidScan
-            For NaN or Inf, and for a plane whose mask is all false.
+            For NaN or Inf, and for a plane without any sampled position.
         """
-        where = _where(self.scan, index)
-        if not np.isfinite(kspace.view(np.float32)).all():
-            raise InvalidScan(
-                f"/kspace contains NaN or Inf{where}; write finite numbers in single-precision range"
-            )
-        if not mask.any():
+        mean = Mean()
+        for average, (kspace, mask) in enumerate(self.scan.each_average(index)):
+            self._see(index, average, kspace, mask)
+            mean.add(kspace, mask)
+        samples = mean.finish()
+        if not samples.mask.any():
             what = (
                 "the mask is false everywhere"
                 if self.scan.mask_array is not None
                 else "/kspace holds only zeros"
             )
-            raise InvalidScan(f"{what}{where}; a plane needs at least one sampled position")
-        self.sampling.see(mask)
+            raise InvalidScan(
+                f"{what}{_where(self.scan, index)}; a plane needs at least one sampled position"
+            )
+        self.sampling.see(samples.counts)
+        per_line = samples.counts.max(axis=1) if self.scan.plane_axes[1] == "kx" else samples.counts
+        self.readouts += int(per_line.sum())
+        return samples
+
+    def _see(
+        self, index: PlaneIndex, average: int, kspace: NDArray[np.complex64], mask: NDArray[np.bool_]
+    ) -> None:
+        """Take in one average of one plane."""
+        where = _where(self.scan, index, average)
+        if not np.isfinite(kspace.view(np.float32)).all():
+            raise InvalidScan(
+                f"/kspace contains NaN or Inf{where}; write finite numbers in single-precision range"
+            )
         holds = np.any(kspace != 0, axis=0)
         outside = int((holds & ~mask).sum())
         self.outside += outside
@@ -133,7 +152,7 @@ class Inspector:
         voxel = voxel_size_mm(scan, (rows, columns))
         return Inspection(
             axes=scan.axes,
-            sampling=self.sampling.as_dict(),
+            sampling={**self.sampling.as_dict(), "readouts": self.readouts},
             objects={
                 "noise": scan.noise_array is not None,
                 "mask": scan.mask_array is not None,
@@ -193,6 +212,7 @@ class Inspector:
                     {"positions": self.empty_positions},
                 )
             )
+        found.extend(averages_finding(self.sampling))
         found.extend(readout_finding(self.sampling, scan.plane_axes))
         found.extend(self._calibration_finding())
         return found
@@ -232,8 +252,9 @@ def _matrix(array: LabelledArray | None, axes: tuple[str, ...]) -> list[int] | N
     return None if array is None else [array.sizes[axis] for axis in axes]
 
 
-def _where(scan: Scan, index: PlaneIndex) -> str:
-    parts = [f"{axis} {position}" for axis, position in index._asdict().items() if axis in scan.axes]
+def _where(scan: Scan, index: PlaneIndex, average: int | None = None) -> str:
+    place = {**index._asdict(), **({} if average is None else {"average": average})}
+    parts = [f"{axis} {position}" for axis, position in place.items() if axis in scan.axes]
     return f" in {', '.join(parts)}" if parts else ""
 
 
@@ -258,8 +279,7 @@ def inspect(scan: Scan, progress: Callable[[float], None] | None = None) -> Insp
     inspector = Inspector(scan)
     planes = scan.planes()
     for done, index in enumerate(planes, start=1):
-        kspace = scan.kspace(index)
-        inspector.see(index, kspace, scan.mask(index, kspace))
+        inspector.read(index)
         if progress is not None:
             progress(done / len(planes))
     check_finite(scan)

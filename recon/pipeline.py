@@ -1,7 +1,7 @@
 """The main path: a scan in, an image and a report out, plane by plane.
 
-    read -> inspect -> whiten -> crop readout oversampling -> compress coils -> coil maps -> solve -> combine
-    -> consistency -> write
+    read -> inspect -> whiten -> combine averages -> crop readout oversampling -> compress coils -> coil maps -> solve
+    -> combine -> consistency -> write
 
 Memory hardly grows with the number of planes: one (or one series of frames that are tied together) for each thread is
 read, solved and judged; results are written in order.
@@ -26,7 +26,7 @@ from recon.errors import InvalidScan
 from recon.formats import ImageWriter, open_scan
 from recon.parallel import in_order
 from recon.plane import PlaneResult, reconstruct_together
-from recon.preparation import Preparation, prepare
+from recon.preparation import Plane, Preparation, prepare
 from recon.report import SolverFigures, build_report
 from recon.scan import PlaneIndex, Scan
 from recon.settings import Settings
@@ -170,15 +170,13 @@ def _run(
             preparation, maps, planes, tell.iteration(group[0], preparation.settings)
         )
         tell("combine")
-        return _Work(group, [mask for _, mask in planes], [kspace for kspace, _ in planes], results)
+        return _Work(group, planes, results)
 
     for done in in_order(work, groups, threads=threads):
         solver.see(done.group, done.results[0].solution)
-        for index, kspace, mask, result in zip(
-            done.group, done.kspaces, done.masks, done.results, strict=True
-        ):
+        for index, plane, result in zip(done.group, done.planes, done.results, strict=True):
             tell("consistency")
-            residuals.see(index, result.residuals, kspace, mask)
+            residuals.see(index, result.residuals, plane.weighted, plane.mask)
             tell("write")
             sink.write("image", index, result.image)
             sink.write("residual_image", index, result.residual_image)
@@ -196,8 +194,7 @@ class _Work:
     """Planes that were solved together, with what they were solved from."""
 
     group: list[PlaneIndex]
-    masks: list[NDArray[np.bool_]]
-    kspaces: list[NDArray[Any]]
+    planes: list[Plane]
     results: list[PlaneResult]
 
 

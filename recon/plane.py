@@ -16,7 +16,7 @@ from recon.coils.noise import mix
 from recon.linear import density_weights, tikhonov, zero_filled
 from recon.operators.encoding import Encoding
 from recon.operators.fourier import crop_centre, inverse_transform
-from recon.preparation import Preparation
+from recon.preparation import Plane, Preparation
 from recon.solver import Problem, Solution, solve
 
 Callback = Callable[[int, float], None]
@@ -31,7 +31,7 @@ class PlaneResult:
     image : complex64 (rows, image columns)
     residual_image : complex64 (rows, image columns)
     residuals : complex64 (coil, rows, columns)
-        Whitened, zero where not sampled.
+        Whitened and weighted, so that noise of unit variance is expected; zero where not sampled.
     solution : Solution or None
         None where nothing was iterated.
     """
@@ -45,7 +45,7 @@ class PlaneResult:
 def reconstruct_together(
     preparation: Preparation,
     maps: CoilMaps | None,
-    planes: list[tuple[NDArray[Any], NDArray[np.bool_]]],
+    planes: list[Plane],
     callback: Callback | None = None,
 ) -> list[PlaneResult]:
     """Solve one plane, or the frames of a series as one problem, by the settings' method and combine.
@@ -55,8 +55,8 @@ def reconstruct_together(
     preparation : Preparation
     maps : CoilMaps or None
         Shared by the planes; None for the coil-by-coil method, which needs none.
-    planes : list of (kspace, mask)
-        Whitened samples of all coils, complex64 (coil, rows, columns), and bool (rows, columns).
+    planes : list of Plane
+        Whitened samples of all coils.
     callback : callable, optional
         Called as callback(iteration, optimality).
 
@@ -66,29 +66,30 @@ def reconstruct_together(
         One for each plane; the solution of a series is the same object in each.
     """
     if maps is None:
-        return [_coil_by_coil(preparation, kspace, mask) for kspace, mask in planes]
+        return [_coil_by_coil(preparation, plane) for plane in planes]
     if len(planes) == 1:
-        kspace, mask = planes[0]
-        u, solution = _solve_plane(preparation, maps, kspace, mask, callback)
-        return [_finish(preparation, maps, u, kspace, mask, solution)]
+        u, solution = _solve_plane(preparation, maps, planes[0], callback)
+        return [_finish(preparation, maps, u, planes[0], solution)]
     u, solution = _solve_series(preparation, maps, planes, callback)
-    pairs = zip(u, planes, strict=True)
-    return [_finish(preparation, maps, frame, kspace, mask, solution) for frame, (kspace, mask) in pairs]
+    return [
+        _finish(preparation, maps, frame, plane, solution) for frame, plane in zip(u, planes, strict=True)
+    ]
 
 
 def _solve_plane(
     preparation: Preparation,
     maps: CoilMaps,
-    kspace: NDArray[Any],
-    mask: NDArray[np.bool_],
+    plane: Plane,
     callback: Callback | None,
 ) -> tuple[NDArray[Any], Solution | None]:
     """u of one plane."""
     settings = preparation.settings
-    encoding = Encoding(maps.virtual / np.float32(preparation.kappa), mask)
-    virtual = preparation.compression.apply(kspace)
+    scaled = maps.virtual / np.float32(preparation.kappa)
+    virtual = preparation.compression.apply(plane.kspace)
     if settings.method == "zero-filled":
-        return zero_filled(encoding, virtual, mask), None
+        # a mean estimates its position whatever its noise: weights would act as a filter on the image
+        return zero_filled(Encoding(scaled, plane.mask), virtual, plane.mask), None
+    encoding = Encoding(scaled, plane.mask, weights=plane.weights)
     data = encoding.to_range(virtual)
     if settings.method == "tikhonov":
         solution = tikhonov(
@@ -108,15 +109,18 @@ def _solve_plane(
 def _solve_series(
     preparation: Preparation,
     maps: CoilMaps,
-    planes: list[tuple[NDArray[Any], NDArray[np.bool_]]],
+    planes: list[Plane],
     callback: Callback | None,
 ) -> tuple[NDArray[Any], Solution]:
     """u of all frames of a slice, (frame, rows, columns)."""
     settings = preparation.settings
-    masks = np.stack([mask for _, mask in planes])
-    encoding = Encoding(maps.virtual[:, np.newaxis] / np.float32(preparation.kappa), masks, "series")
+    masks = np.stack([plane.mask for plane in planes])
+    weights = None
+    if any(plane.weights is not None for plane in planes):
+        weights = np.stack([plane.mask if plane.weights is None else plane.weights for plane in planes])
+    encoding = Encoding(maps.virtual[:, np.newaxis] / np.float32(preparation.kappa), masks, "series", weights)
     data = encoding.to_range(
-        np.stack([preparation.compression.apply(kspace) for kspace, _ in planes], axis=1)
+        np.stack([preparation.compression.apply(plane.kspace) for plane in planes], axis=1)
     )
     problem = Problem(
         encoding,
@@ -142,26 +146,27 @@ def _finish(
     preparation: Preparation,
     maps: CoilMaps,
     u: NDArray[Any],
-    kspace: NDArray[Any],
-    mask: NDArray[np.bool_],
+    plane: Plane,
     solution: Solution | None,
 ) -> PlaneResult:
     """Image units, residual and combination of one plane."""
     m = np.where(maps.support, u / np.float32(preparation.kappa), 0).astype(np.complex64)
-    residuals = consistency.residual(m, maps.whitened, kspace, mask)
+    residuals = consistency.residual(m, maps.whitened, plane.kspace, plane.mask)
     difference = consistency.residual_image(residuals, maps.whitened)
+    if plane.weights is not None:
+        residuals = residuals * plane.weights
     if preparation.settings.combination == "root-sum-of-squares":
         m = root_sum_of_squares(mix(preparation.whitening.unwhitener, maps.whitened * m))
     return PlaneResult(_cropped(preparation, m), _cropped(preparation, difference), residuals, solution)
 
 
-def _coil_by_coil(preparation: Preparation, kspace: NDArray[Any], mask: NDArray[np.bool_]) -> PlaneResult:
+def _coil_by_coil(preparation: Preparation, plane: Plane) -> PlaneResult:
     """Root-sum-of-squares of density-compensated coil images: they reproduce their samples, so no residual is left."""
-    images = inverse_transform(kspace * density_weights(mask))
+    images = inverse_transform(plane.kspace * density_weights(plane.mask))
     image = root_sum_of_squares(mix(preparation.whitening.unwhitener, images))
     nothing = np.zeros_like(image)
     return PlaneResult(
-        _cropped(preparation, image), _cropped(preparation, nothing), np.zeros_like(kspace), None
+        _cropped(preparation, image), _cropped(preparation, nothing), np.zeros_like(plane.kspace), None
     )
 
 

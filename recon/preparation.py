@@ -4,11 +4,12 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
-from typing import Any, Final
+from typing import Any, Final, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
+from recon.averages import Samples, block_scale, relative_weights
 from recon.coils.calibration import LARGEST_BLOCK, calibration_block, check_block, crop_block
 from recon.coils.compression import Compression
 from recon.coils.maps import MapMaker, MapMethod, squared_gain
@@ -27,6 +28,28 @@ BLOCKS_PER_SLICE: Final = 8
 Report = Callable[[str, float], None]
 
 
+class Plane(NamedTuple):
+    """One plane as it is solved.
+
+    Attributes
+    ----------
+    kspace : complex64 (coil, rows, columns)
+        Whitened, readout oversampling removed, zero where not sampled; of averages the mean.
+    mask : bool (rows, columns)
+    weights : float32 (rows, columns) or None
+        sqrt(n / mean n) where positions were measured unequally often, zero where not sampled; None: one everywhere.
+    """
+
+    kspace: NDArray[Any]
+    mask: NDArray[np.bool_]
+    weights: NDArray[np.float32] | None = None
+
+    @property
+    def weighted(self) -> NDArray[Any]:
+        """Samples whose noise has unit variance."""
+        return self.kspace if self.weights is None else self.kspace * self.weights
+
+
 @dataclass(frozen=True)
 class Preparation:
     """Everything that the planes share.
@@ -40,7 +63,9 @@ class Preparation:
     kappa : float
         u = kappa m: noise units over image units.
     blocks : dict
-        Raw calibration blocks by slice.
+        Raw calibration blocks by slice, scaled so that their noise is that of the whitener.
+    mean_count : float
+        Samples behind a sampled position, in the mean.
     """
 
     scan: Scan
@@ -53,6 +78,7 @@ class Preparation:
     image_columns: int
     kappa: float
     blocks: dict[int, list[NDArray[Any]]]
+    mean_count: float = 1.0
 
     def map_maker(self) -> MapMaker:
         """The maker of each slice's maps."""
@@ -63,14 +89,14 @@ class Preparation:
         """Whitened calibration blocks of one slice."""
         return [self.whitening.apply(block) for block in self.blocks[position]]
 
-    def load(self, index: PlaneIndex) -> tuple[NDArray[Any], NDArray[np.bool_]]:
-        """Whitened samples (coil, rows, columns) of one plane, readout oversampling removed, and their mask."""
-        raw = self.scan.kspace(index)
-        mask = self.scan.mask(index, raw)
-        kspace = self.whitening.apply(crop_readout(raw * mask, self.shape[1]))
-        if self.shape[1] != mask.shape[1]:
-            mask = np.broadcast_to(mask[:, :1], self.shape)
-        return kspace, mask
+    def load(self, index: PlaneIndex) -> Plane:
+        """One plane of the scan, ready to be solved."""
+        samples = self.scan.samples(index)
+        kspace = self.whitening.apply(crop_readout(samples.kspace, self.shape[1]))
+        counts = samples.counts
+        if self.shape[1] != counts.shape[1]:
+            counts = np.broadcast_to(counts[:, :1], self.shape)
+        return Plane(kspace, counts > 0, relative_weights(counts, self.mean_count))
 
     def groups(self) -> list[list[PlaneIndex]]:
         """Planes that are solved together: the frames of a slice and contrast if something ties them, else one each."""
@@ -89,6 +115,7 @@ class Preparation:
         """The stages' own figures for the report."""
         return {
             "whitening": {"source": self.whitening.source, "samples": self.whitening.samples},
+            "averages": {"mean_count": self.mean_count},
             "readout_crop": {"from": self.scan.plane_shape[1], "to": self.image_columns},
             "coil_compression": {
                 "coils": self.scan.coils,
@@ -120,10 +147,18 @@ def prepare(scan: Scan, settings: Settings, report: Report) -> Preparation:
     method = _map_method(scan, settings)
     shape = _solved_shape(scan)
     inspection, blocks = _read(scan, shape, method, report)
+    if shape[1] != scan.plane_shape[1] and inspection.sampling["varies_along_readout"]:
+        # a partial echo that only the data show: its readouts cannot be transformed, and so not cropped, either
+        shape = scan.plane_shape
+        inspection, blocks = _read(scan, shape, method, report)
+    mean_count = float(inspection.sampling["samples_per_position"]["mean"])
+    if mean_count != 1:
+        unit = np.float32(1 / np.sqrt(mean_count))
+        blocks = {position: [unit * block for block in of_slice] for position, of_slice in blocks.items()}
     check_job(inspection.as_dict(), settings)
     check_finite(scan)
     report("whiten", 0.0)
-    whitening = estimate_whitening(scan)
+    whitening = estimate_whitening(scan, mean_count)
     resolved = resolve_strengths(settings, has_noise_units=whitening.has_noise_units)
     report("crop", 0.0)
     report("compress", 0.0)
@@ -156,6 +191,7 @@ def prepare(scan: Scan, settings: Settings, report: Report) -> Preparation:
             )
         ),
         blocks=blocks,
+        mean_count=mean_count,
     )
 
 
@@ -199,36 +235,35 @@ def _read(
     chosen = {round(step * shared / BLOCKS_PER_SLICE) for step in range(BLOCKS_PER_SLICE)} if shared else {0}
     for done, index in enumerate(planes):
         report("read", done / len(planes))
-        kspace = scan.kspace(index)
-        mask = scan.mask(index, kspace)
+        samples = inspector.read(index)
         report("inspect", done / len(planes))
-        inspector.see(index, kspace, mask)
         if done % shared in chosen:
             of_slice = blocks.setdefault(index.slice, [])
             needs_full = method in ("eigenvector", "adaptive")
             if scan.reference_array is None:
-                of_slice.append(_block(shape, kspace, mask, must_be_full=needs_full))
+                of_slice.append(_block(shape, samples, must_be_full=needs_full))
             elif not of_slice:
-                centre = _block(shape, kspace, mask, must_be_full=False)
+                centre = _block(shape, samples, must_be_full=False)
                 of_slice.append(_reference_block(scan, shape, index.slice, centre))
     return inspector.finish(), blocks
 
 
-def _block(
-    shape: tuple[int, int], kspace: NDArray[Any], mask: NDArray[np.bool_], *, must_be_full: bool
-) -> NDArray[Any]:
-    """Raw central block of one plane, readout oversampling removed where readouts are complete."""
+def _block(shape: tuple[int, int], samples: Samples, *, must_be_full: bool) -> NDArray[Any]:
+    """Central block of one plane with the noise of one sample, readout oversampling removed where that is possible."""
     columns = shape[1]
-    if columns != mask.shape[1]:
-        rows = min(2 * LARGEST_BLOCK, mask.shape[0])
-        centre = crop_block(mask, rows, mask.shape[1])
-        kspace = crop_readout(crop_block(kspace, rows, mask.shape[1]) * centre, columns)
-        mask = np.broadcast_to(centre[:, :1], (rows, columns))
+    kspace, counts = samples
+    if columns != counts.shape[1]:
+        rows = min(2 * LARGEST_BLOCK, counts.shape[0])
+        centre = crop_block(counts, rows, counts.shape[1])
+        kspace = crop_readout(crop_block(kspace, rows, counts.shape[1]), columns)
+        counts = np.broadcast_to(centre[:, :1], (rows, columns))
     if must_be_full:
-        return calibration_block(kspace, mask)
-    # only the coils' mutual strength is wanted, which gaps do not change
-    sides = tuple(min(LARGEST_BLOCK, n) for n in mask.shape)
-    return crop_block(kspace * mask, *sides)
+        block = calibration_block(kspace, counts > 0)
+    else:
+        # only the coils' mutual strength is wanted, which gaps do not change
+        block = crop_block(kspace, *(min(LARGEST_BLOCK, n) for n in counts.shape))
+    scale = block_scale(crop_block(counts, *block.shape[1:]))
+    return block if scale == 1 else block * np.float32(scale)
 
 
 def _reference_block(scan: Scan, shape: tuple[int, int], position: int, centre: NDArray[Any]) -> NDArray[Any]:

@@ -19,12 +19,17 @@ class SamplingFacts:
     ----------
     shape : (rows, columns)
         Of a plane.
+    averages : int
+        How often each plane was measured at most.
     """
 
-    def __init__(self, shape: tuple[int, int]) -> None:
+    def __init__(self, shape: tuple[int, int], averages: int = 1) -> None:
         self.shape = shape
+        self.averages = averages
         self.planes = 0
         self.sampled = 0
+        self.samples = 0
+        self.fewest, self.most = 0, 0
         self.calibration = shape
         self.peak_side_lobe = 0.0
         self.varies_along_columns = False
@@ -32,10 +37,21 @@ class SamplingFacts:
         self._nominal: list[float] = []
         self._seen: set[bytes] = set()
 
-    def see(self, mask: NDArray[np.bool_]) -> None:
-        """Take in one plane's mask."""
+    @property
+    def mean_count(self) -> float:
+        """Samples behind a sampled position, in the mean."""
+        return self.samples / max(self.sampled, 1)
+
+    def see(self, counts: NDArray[Any]) -> None:
+        """Take in one plane: how often each position was measured (or a mask)."""
+        mask = np.asarray(counts > 0)
         self.planes += 1
         self.sampled += int(mask.sum())
+        self.samples += int(counts.sum())
+        if mask.any():
+            fewest = int(counts[mask].min())
+            self.fewest = min(self.fewest or fewest, fewest)
+            self.most = max(self.most, int(counts.max()))
         key = np.packbits(mask).tobytes()
         if key in self._seen:
             return
@@ -54,12 +70,13 @@ class SamplingFacts:
         total = self.planes * self.shape[0] * self.shape[1]
         return {
             "sampled_fraction": self.sampled / total,
-            "net_acceleration": total / self.sampled,
+            "net_acceleration": total * self.averages / self.samples,
             "nominal_acceleration": float(np.mean(self._nominal)),
             "calibration": {"rows": int(self.calibration[0]), "columns": int(self.calibration[1])},
             "peak_side_lobe": self.peak_side_lobe,
             "distinct_masks": len(self._seen),
             "varies_along_readout": self.varies_along_columns,
+            "samples_per_position": {"fewest": self.fewest, "most": self.most, "mean": self.mean_count},
         }
 
 
@@ -110,5 +127,33 @@ def readout_finding(facts: SamplingFacts, plane_axes: tuple[str, str]) -> list[F
             "The mask varies along kx, which no scanner can do: fine for a study, but do not read acquisition "
             "times from it.",
             "/mask",
+        )
+    ]
+
+
+def averages_finding(facts: SamplingFacts) -> list[Finding]:
+    """The finding about repeated measurements, if there are any."""
+    numbers = {"fewest": facts.fewest, "most": facts.most, "mean": facts.mean_count}
+    if facts.most <= 1:
+        return []
+    if facts.fewest == facts.most:
+        return [
+            Finding(
+                "averages-combined",
+                "info",
+                f"Every sampled position was measured {facts.most} times: the image is made of the means, so keep "
+                f"averages apart as frames if something moved between them.",
+                "/kspace",
+                numbers,
+            )
+        ]
+    return [
+        Finding(
+            "averages-unequal",
+            "info",
+            f"Sampled positions were measured {facts.fewest} to {facts.most} times: their means count with the square "
+            f"root of that number, so keep averages apart as frames if something moved between them.",
+            "/kspace",
+            numbers,
         )
     ]

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field
 from itertools import product
 from types import TracebackType
@@ -11,6 +11,7 @@ from typing import Any, NamedTuple, Protocol, Self
 import numpy as np
 from numpy.typing import NDArray
 
+from recon.averages import Mean, Samples
 from recon.axes import COMPLEX_AXIS, KSPACE_AXES, OUTER_AXES, LabelledArray, image_axis
 from recon.errors import InvalidScan
 from recon.findings import Finding
@@ -37,7 +38,7 @@ class Scan:
     Attributes
     ----------
     kspace_array : LabelledArray
-        Complex, axes among `frame slice contrast coil` and either `ky kx` or `kz ky`.
+        Complex, axes among `frame slice contrast average coil` and either `ky kx` or `kz ky`.
     mask_array : LabelledArray or None
         Bool, a subset of the k-space axes without `coil`; None: inferred from zeros.
     noise_array : LabelledArray or None
@@ -107,6 +108,11 @@ class Scan:
         return self.axes.get("coil", 1)
 
     @property
+    def averages(self) -> int:
+        """How often a plane was measured (1 where the axis is absent)."""
+        return self.axes.get("average", 1)
+
+    @property
     def outer_axes(self) -> tuple[str, ...]:
         """Those of `frame slice contrast` that the scan has, in canonical order."""
         return tuple(axis for axis in OUTER_AXES if axis in self.axes)
@@ -123,25 +129,53 @@ class Scan:
         return sorted(every, key=lambda index: (index.slice, index.frame, index.contrast))
 
     def kspace(self, index: PlaneIndex) -> NDArray[np.complex64]:
-        """Read one plane: complex64 of shape (coil, rows, columns)."""
-        part: NDArray[np.complex64] = self.kspace_array.take(**index._asdict())
+        """Read one plane: complex64 of shape (coil, rows, columns), the mean where there are averages."""
+        if self.averages > 1:
+            return self.samples(index).kspace
+        return self._kspace(index, 0)
+
+    def _kspace(self, index: PlaneIndex, average: int) -> NDArray[np.complex64]:
+        part: NDArray[np.complex64] = self.kspace_array.take(**index._asdict(), average=average)
         return part if "coil" in self.axes else part[np.newaxis]
 
+    def each_average(self, index: PlaneIndex) -> Iterator[tuple[NDArray[np.complex64], NDArray[np.bool_]]]:
+        """Read the averages of one plane one by one: samples (coil, rows, columns) as stored, and their mask."""
+        for average in range(self.averages):
+            kspace = self._kspace(index, average)
+            yield kspace, self._mask(index, average, kspace)
+
+    def samples(self, index: PlaneIndex) -> Samples:
+        """Read one plane: the mean of its averages, zero where not sampled, and how many samples are behind it."""
+        mean = Mean()
+        for kspace, mask in self.each_average(index):
+            mean.add(kspace, mask)
+        return mean.finish()
+
     def mask(self, index: PlaneIndex, kspace: NDArray[np.complex64] | None = None) -> NDArray[np.bool_]:
-        """Sampling mask of one plane, broadcast to (rows, columns).
+        """Sampling mask of one plane, broadcast to (rows, columns): what any of its averages has sampled.
 
         Without `/mask` a position counts as sampled when any coil holds a value other than zero there. Along a readout
         (`kx`) zeros inside a measured line are values, not gaps: there a column is left out only where every line is
         zero, as at the missing end of a partial echo.
         """
+        if self.averages == 1 or (self.mask_array is not None and "average" not in self.mask_array.axes):
+            return self._mask(index, 0, kspace)
         if self.mask_array is None:
-            data = self.kspace(index) if kspace is None else kspace
+            return self.samples(index).mask
+        masks = (self._mask(index, average) for average in range(self.averages))
+        return np.asarray(np.logical_or.reduce(list(masks)), np.bool_)
+
+    def _mask(
+        self, index: PlaneIndex, average: int, kspace: NDArray[np.complex64] | None = None
+    ) -> NDArray[np.bool_]:
+        if self.mask_array is None:
+            data = self._kspace(index, average) if kspace is None else kspace
             sampled: NDArray[np.bool_] = np.any(data != 0, axis=0)
             if self.plane_axes[1] == "kx":
                 sampled = readout_pattern(sampled)
             return sampled
-        part = self.mask_array.take(**index._asdict())
-        left = [axis for axis in self.mask_array.axes if axis not in OUTER_AXES]
+        part = self.mask_array.take(**index._asdict(), average=average)
+        left = [axis for axis in self.mask_array.axes if axis not in (*OUTER_AXES, "average")]
         shape = [self.axes[axis] if axis in left else 1 for axis in self.plane_axes]
         return np.broadcast_to(part.reshape(shape), self.plane_shape)
 

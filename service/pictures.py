@@ -113,8 +113,7 @@ def quick_look(scan: Scan) -> bytes:
     """What a scan holds at a glance: its middle plane, zero-filled, root-sum-of-squares over the coils."""
     planes = scan.planes()
     index = planes[len(planes) // 2]
-    samples = scan.kspace(index)
-    sampled = np.where(scan.mask(index, samples), samples, 0)
+    sampled = scan.samples(index).kspace
     image = np.fft.fftshift(
         np.fft.ifft2(np.fft.ifftshift(sampled, axes=(-2, -1)), norm="ortho"), axes=(-2, -1)
     )

@@ -39,7 +39,7 @@ class Whitening:
     unwhitener : complex128 (coil, coil)
         Its inverse.
     covariance : complex128 (coil, coil)
-        Psi at the image's dwell time, in the square of the data's units.
+        Psi of the combined averages at the image's dwell time, in the square of the data's units.
     source : {"noise-scan", "periphery", "none"}
         `none`: the scan is free of noise, strengths are fractions of the largest zero-filled image value.
     samples : int
@@ -127,8 +127,14 @@ def whitening_from(covariance: NDArray[Any], source: str, samples: int) -> White
     )
 
 
-def estimate_whitening(scan: Scan) -> Whitening:
+def estimate_whitening(scan: Scan, mean_count: float = 1.0) -> Whitening:
     """Whitening from `/noise`, or from the periphery of k-space where there is none.
+
+    Parameters
+    ----------
+    scan : Scan
+    mean_count : float
+        Samples behind a sampled position, in the mean: the noise of their mean has Psi over that as its covariance.
 
     Raises
     ------
@@ -144,18 +150,19 @@ def estimate_whitening(scan: Scan) -> Whitening:
             scan.attributes.get("sample_time_us"),
             scan.noise_attributes.get("receiver_noise_bandwidth"),
         )
-        return whitening_from(sample_covariance(noise) * scale, "noise-scan", noise.shape[1])
+        covariance = sample_covariance(noise) * (scale / mean_count)
+        return whitening_from(covariance, "noise-scan", noise.shape[1])
     covariance, samples, largest = periphery_covariance(scan)
     if largest == 0.0 or np.sqrt(np.trace(covariance).real / scan.coils) <= ROUNDING * largest:
         identity = np.eye(scan.coils, dtype=np.complex128)
         unit = max(_largest_zero_filled(scan, index) for index in scan.planes()) or 1.0
         return Whitening(identity / unit, identity * unit, identity * 0, "none", 0)
     # what signal is left out there is coherent between coils and would be whitened away: variances alone are trusted
-    return whitening_from(np.diag(np.diag(covariance)), "periphery", samples)
+    return whitening_from(np.diag(np.diag(covariance)) / mean_count, "periphery", samples)
 
 
 def periphery_covariance(scan: Scan) -> tuple[NDArray[Any], int, float]:
-    """Covariance of the sampled positions farthest from the k-space centre.
+    """Covariance of single samples at the positions farthest from the k-space centre.
 
     What little signal is left there makes the estimate too large rather than too small.
 
@@ -177,20 +184,19 @@ def periphery_covariance(scan: Scan) -> tuple[NDArray[Any], int, float]:
     total = np.zeros((scan.coils, scan.coils), np.complex128)
     samples, largest = 0, 0.0
     for index in chosen:
-        kspace = scan.kspace(index)
-        sampled = scan.mask(index, kspace) & np.any(kspace != 0, axis=0)
-        if not sampled.any():
-            continue
-        largest = max(largest, float(np.abs(kspace[:, sampled]).max()))
-        count = max(int(PERIPHERY_SHARE * sampled.sum()), min(4 * scan.coils, int(sampled.sum())))
-        far = np.sort(distance[sampled])[-count]
-        values = kspace[:, sampled & (distance >= far)]
-        total += sample_covariance(values) * values.shape[1]
-        samples += values.shape[1]
+        for kspace, mask in scan.each_average(index):
+            sampled = mask & np.any(kspace != 0, axis=0)
+            if not sampled.any():
+                continue
+            largest = max(largest, float(np.abs(kspace[:, sampled]).max()))
+            count = max(int(PERIPHERY_SHARE * sampled.sum()), min(4 * scan.coils, int(sampled.sum())))
+            far = np.sort(distance[sampled])[-count]
+            values = kspace[:, sampled & (distance >= far)]
+            total += sample_covariance(values) * values.shape[1]
+            samples += values.shape[1]
     return total / max(samples, 1), samples, largest
 
 
 def _largest_zero_filled(scan: Scan, index: PlaneIndex) -> float:
-    kspace = scan.kspace(index)
-    images = inverse_transform(kspace * scan.mask(index, kspace))
+    images = inverse_transform(scan.samples(index).kspace)
     return float(np.sqrt(np.sum(np.abs(images) ** 2, axis=0)).max())

@@ -247,4 +247,4 @@ def test_planes_of_one_slice_follow_each_other() -> None:
 
 
 def test_vocabulary() -> None:
-    assert KSPACE_AXES == ("frame", "slice", "contrast", "coil", "kz", "ky", "kx")
+    assert KSPACE_AXES == ("frame", "slice", "contrast", "average", "coil", "kz", "ky", "kx")
