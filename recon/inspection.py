@@ -16,6 +16,7 @@ from recon.averages import Mean, Samples
 from recon.axes import LabelledArray
 from recon.caution import CAUTION
 from recon.coils.calibration import SMALLEST_BLOCK
+from recon.coverage import Coverage, coverage, coverage_facts, partial_fourier_findings
 from recon.errors import InvalidScan
 from recon.findings import Finding
 from recon.formats.image_layout import voxel_size_mm
@@ -41,7 +42,8 @@ class Inspection:
         `sampled_fraction` (of the positions), `net_acceleration` (positions of all averages over samples),
         `readouts` (of all planes and averages),
         `nominal_acceleration`, `calibration` (rows, columns), `peak_side_lobe`, `distinct_masks`,
-        `varies_along_readout` (or along the columns of a phase-phase plane), `samples_per_position` (averages).
+        `varies_along_readout` (or along the columns of a phase-phase plane), `samples_per_position` (averages),
+        `partial_fourier`, `resolution` in mm by axis (null where the field of view is unknown).
     objects : dict
         Which of the optional objects the scan has; rows and columns of `/reference` and `/sensitivity`, those of the
         reference without readout oversampling where the scan is solved without it.
@@ -152,7 +154,11 @@ class Inspector:
         voxel = voxel_size_mm(scan, (rows, columns))
         return Inspection(
             axes=scan.axes,
-            sampling={**self.sampling.as_dict(), "readouts": self.readouts},
+            sampling={
+                **self.sampling.as_dict(),
+                "readouts": self.readouts,
+                **coverage_facts(self._coverage(), _fields_mm(scan)),
+            },
             objects={
                 "noise": scan.noise_array is not None,
                 "mask": scan.mask_array is not None,
@@ -167,6 +173,10 @@ class Inspector:
             title=scan.title,
             findings=[*scan.findings, *self._findings()],
         )
+
+    def _coverage(self) -> dict[str, Coverage]:
+        pairs = zip(self.scan.plane_axes, self.sampling.covered, strict=True)
+        return {axis: coverage(covered) for axis, covered in pairs}
 
     def _findings(self) -> list[Finding]:
         scan, found = self.scan, []
@@ -214,6 +224,7 @@ class Inspector:
             )
         found.extend(averages_finding(self.sampling))
         found.extend(readout_finding(self.sampling, scan.plane_axes))
+        found.extend(partial_fourier_findings(self._coverage()))
         found.extend(self._calibration_finding())
         return found
 
@@ -250,6 +261,12 @@ def _along_readout(holds: NDArray[np.bool_], scan: Scan) -> NDArray[np.bool_]:
 
 def _matrix(array: LabelledArray | None, axes: tuple[str, ...]) -> list[int] | None:
     return None if array is None else [array.sizes[axis] for axis in axes]
+
+
+def _fields_mm(scan: Scan) -> dict[str, float] | None:
+    """Encoded field of view by k-space axis."""
+    fields = scan.attributes.get("field_of_view_mm")
+    return None if fields is None else dict(zip(("kx", "ky", "kz"), fields, strict=True))
 
 
 def _where(scan: Scan, index: PlaneIndex, average: int | None = None) -> str:

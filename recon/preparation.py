@@ -146,11 +146,7 @@ def prepare(scan: Scan, settings: Settings, report: Report) -> Preparation:
     """
     method = _map_method(scan, settings)
     shape = _solved_shape(scan)
-    inspection, blocks = _read(scan, shape, method, report)
-    if shape[1] != scan.plane_shape[1] and inspection.sampling["varies_along_readout"]:
-        # a partial echo that only the data show: its readouts cannot be transformed, and so not cropped, either
-        shape = scan.plane_shape
-        inspection, blocks = _read(scan, shape, method, report)
+    inspection, blocks, shape = _read(scan, shape, method, report)
     mean_count = float(inspection.sampling["samples_per_position"]["mean"])
     if mean_count != 1:
         unit = np.float32(1 / np.sqrt(mean_count))
@@ -226,8 +222,8 @@ def _solved_shape(scan: Scan) -> tuple[int, int]:
 
 def _read(
     scan: Scan, shape: tuple[int, int], method: MapMethod | None, report: Report
-) -> tuple[Inspection, dict[int, list[NDArray[Any]]]]:
-    """One pass over all data: facts, and each slice's calibration blocks."""
+) -> tuple[Inspection, dict[int, list[NDArray[Any]]], tuple[int, int]]:
+    """One pass over all data: facts, each slice's calibration blocks, and the shape of a plane as it is solved."""
     inspector = Inspector(scan)
     blocks: dict[int, list[NDArray[Any]]] = {}
     planes = scan.planes()
@@ -237,6 +233,9 @@ def _read(
         report("read", done / len(planes))
         samples = inspector.read(index)
         report("inspect", done / len(planes))
+        if shape[1] != scan.plane_shape[1] and (samples.counts != samples.counts[:, :1]).any():
+            # a partial echo that only the data show: its readouts cannot be transformed, and so not cropped, either
+            return _read(scan, scan.plane_shape, method, report)
         if done % shared in chosen:
             of_slice = blocks.setdefault(index.slice, [])
             needs_full = method in ("eigenvector", "adaptive")
@@ -245,7 +244,7 @@ def _read(
             elif not of_slice:
                 centre = _block(shape, samples, must_be_full=False)
                 of_slice.append(_reference_block(scan, shape, index.slice, centre))
-    return inspector.finish(), blocks
+    return inspector.finish(), blocks, shape
 
 
 def _block(shape: tuple[int, int], samples: Samples, *, must_be_full: bool) -> NDArray[Any]:

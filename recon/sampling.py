@@ -32,6 +32,8 @@ class SamplingFacts:
         self.fewest, self.most = 0, 0
         self.calibration = shape
         self.peak_side_lobe = 0.0
+        #: positions along each axis where any plane has measured anything.
+        self.covered = tuple(np.zeros(n, np.bool_) for n in shape)
         self.varies_along_columns = False
         self.is_partial_echo = True
         self._nominal: list[float] = []
@@ -56,6 +58,8 @@ class SamplingFacts:
         if key in self._seen:
             return
         self._seen.add(key)
+        for axis, covered in enumerate(self.covered):
+            covered |= mask.any(axis=1 - axis)
         rows, columns = central_block(mask)
         if rows * columns < self.calibration[0] * self.calibration[1] or len(self._seen) == 1:
             self.calibration = (rows, columns)
