@@ -14,10 +14,10 @@ from recon.coils.combination import root_sum_of_squares
 from recon.coils.maps import CoilMaps
 from recon.coils.noise import mix
 from recon.linear import density_weights, tikhonov, zero_filled
-from recon.operators.encoding import Encoding
 from recon.operators.fourier import crop_centre, inverse_transform
 from recon.preparation import Plane, Preparation
-from recon.solver import Problem, Solution, solve
+from recon.problem import make_problem, measurement
+from recon.solver import Solution, solve
 
 Callback = Callable[[int, float], None]
 
@@ -67,79 +67,38 @@ def reconstruct_together(
     """
     if maps is None:
         return [_coil_by_coil(preparation, plane) for plane in planes]
-    if len(planes) == 1:
-        u, solution = _solve_plane(preparation, maps, planes[0], callback)
-        return [_finish(preparation, maps, u, planes[0], solution)]
-    u, solution = _solve_series(preparation, maps, planes, callback)
+    u, solution = _solve(preparation, maps, planes, callback)
+    frames = [u] if len(planes) == 1 else u
     return [
-        _finish(preparation, maps, frame, plane, solution) for frame, plane in zip(u, planes, strict=True)
+        _finish(preparation, maps, frame, plane, solution)
+        for frame, plane in zip(frames, planes, strict=True)
     ]
 
 
-def _solve_plane(
-    preparation: Preparation,
-    maps: CoilMaps,
-    plane: Plane,
-    callback: Callback | None,
-) -> tuple[NDArray[Any], Solution | None]:
-    """u of one plane."""
-    settings = preparation.settings
-    scaled = maps.virtual / np.float32(preparation.kappa)
-    virtual = preparation.compression.apply(plane.kspace)
-    if settings.method == "zero-filled":
-        # a mean estimates its position whatever its noise: weights would act as a filter on the image
-        return zero_filled(Encoding(scaled, plane.mask), virtual, plane.mask), None
-    encoding = Encoding(scaled, plane.mask, weights=plane.weights)
-    data = encoding.to_range(virtual)
-    if settings.method == "tikhonov":
-        solution = tikhonov(
-            encoding,
-            data,
-            float(settings.tikhonov_strength),
-            tolerance=settings.tolerance,
-            max_iterations=settings.max_iterations,
-            callback=callback,
-        )
-    else:
-        strengths = float(settings.wavelet_strength), float(settings.tv_strength)
-        solution = _solve(preparation, Problem(encoding, data, settings.wavelet, *strengths), callback)
-    return solution.image, solution
-
-
-def _solve_series(
+def _solve(
     preparation: Preparation,
     maps: CoilMaps,
     planes: list[Plane],
     callback: Callback | None,
-) -> tuple[NDArray[Any], Solution]:
-    """u of all frames of a slice, (frame, rows, columns)."""
+) -> tuple[NDArray[Any], Solution | None]:
+    """u of the planes, (frame, rows, columns); a single plane has no frame axis."""
     settings = preparation.settings
-    masks = np.stack([plane.mask for plane in planes])
-    weights = None
-    if any(plane.weights is not None for plane in planes):
-        weights = np.stack([plane.mask if plane.weights is None else plane.weights for plane in planes])
-    encoding = Encoding(maps.virtual[:, np.newaxis] / np.float32(preparation.kappa), masks, "series", weights)
-    data = encoding.to_range(
-        np.stack([preparation.compression.apply(plane.kspace) for plane in planes], axis=1)
-    )
-    problem = Problem(
-        encoding,
-        data,
-        settings.wavelet,
-        float(settings.wavelet_strength),
-        float(settings.tv_strength),
-        float(settings.temporal_strength),
-        float(settings.low_rank_strength),
-    )
-    solution = _solve(preparation, problem, callback)
+    tolerance, max_iterations = settings.tolerance, settings.max_iterations
+    if settings.method == "zero-filled":
+        # a mean estimates its position whatever its noise: weights would act as a filter on the image
+        encoding, _ = measurement(preparation, maps, [plane._replace(weights=None) for plane in planes])
+        virtual = preparation.compression.apply(planes[0].kspace)
+        return zero_filled(encoding, virtual, planes[0].mask), None
+    if settings.method == "tikhonov":
+        encoding, data = measurement(preparation, maps, planes)
+        strength = float(settings.tikhonov_strength)
+        solution = tikhonov(
+            encoding, data, strength, tolerance=tolerance, max_iterations=max_iterations, callback=callback
+        )
+    else:
+        problem = make_problem(preparation, maps, planes)
+        solution = solve(problem, tolerance=tolerance, max_iterations=max_iterations, callback=callback)
     return solution.image, solution
-
-
-def _solve(preparation: Preparation, problem: Problem, callback: Callback | None) -> Solution:
-    settings = preparation.settings
-    return solve(
-        problem, tolerance=settings.tolerance, max_iterations=settings.max_iterations, callback=callback
-    )
 
 
 def _finish(
