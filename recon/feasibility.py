@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from typing import Any
 
-from recon.coils.calibration import check_block
+from recon.coils.calibration import check_block, prefers_time_average
 from recon.errors import InvalidScan, InvalidSettings
 from recon.settings import Settings
 
@@ -63,8 +63,16 @@ def check_job(facts: Mapping[str, Any], settings: Settings) -> None:
         rows, columns = facts["objects"]["reference"]
         check_block(rows, columns, (matrix[0], matrix[1]), "/reference")
     else:
-        rows, columns = (facts["sampling"]["calibration"][side] for side in ("rows", "columns"))
-        check_block(rows, columns, (matrix[0], matrix[1]), "the scan")
+        check_block(*calibration_sides(facts["sampling"]), (matrix[0], matrix[1]), "the scan")
+
+
+def calibration_sides(sampling: Mapping[str, Any]) -> tuple[int, int]:
+    """Rows and columns of the calibration region that maps are computed from: of single planes or the time average."""
+    single, average = (
+        (int(block["rows"]), int(block["columns"])) if block else (0, 0)
+        for block in (sampling["calibration"], sampling.get("time_average_calibration"))
+    )
+    return average if prefers_time_average(single, average) else single
 
 
 def needs_maps(settings: Settings, coils: int) -> bool:

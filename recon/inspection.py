@@ -15,19 +15,22 @@ from numpy.typing import NDArray
 from recon.averages import Mean, Samples
 from recon.axes import LabelledArray
 from recon.caution import CAUTION
-from recon.coils.calibration import SMALLEST_BLOCK
 from recon.coverage import Coverage, coverage, coverage_facts, partial_fourier_findings
 from recon.errors import InvalidScan
 from recon.findings import Finding
 from recon.formats.image_layout import voxel_size_mm
-from recon.sampling import SamplingFacts, averages_finding, readout_finding
+from recon.sampling import (
+    FrameUnion,
+    SamplingFacts,
+    averages_finding,
+    calibration_findings,
+    readout_finding,
+)
 from recon.scan import PlaneIndex, Scan, cropped_readout, readout_pattern
 
 #: magnitudes of k-space that single-precision arithmetic can square without harm.
 SMALLEST_VALUE: Final = 1e-15
 LARGEST_VALUE: Final = 1e15
-#: a calibration region below this side gives coarse maps.
-COMFORTABLE_BLOCK: Final = 16
 
 
 @dataclass(frozen=True)
@@ -41,7 +44,8 @@ class Inspection:
     sampling : dict
         `sampled_fraction` (of the positions), `net_acceleration` (positions of all averages over samples),
         `readouts` (of all planes and averages),
-        `nominal_acceleration`, `calibration` (rows, columns), `peak_side_lobe`, `distinct_masks`,
+        `nominal_acceleration`, `calibration` (rows, columns), `time_average_calibration` (of all frames together; null
+        without frames), `peak_side_lobe`, `distinct_masks`,
         `varies_along_readout` (or along the columns of a phase-phase plane), `samples_per_position` (averages),
         `partial_fourier`, `resolution` in mm by axis (null where the field of view is unknown).
     objects : dict
@@ -76,6 +80,7 @@ class Inspector:
     def __init__(self, scan: Scan) -> None:
         self.scan = scan
         self.sampling = SamplingFacts(scan.plane_shape, scan.averages)
+        self.union = FrameUnion() if scan.axes.get("frame", 1) > 1 else None
         self.readouts = 0
         self.outside = 0
         self.outside_planes = 0
@@ -106,6 +111,8 @@ class Inspector:
                 f"{what}{_where(self.scan, index)}; a plane needs at least one sampled position"
             )
         self.sampling.see(samples.counts)
+        if self.union is not None:
+            self.union.see(index, samples.mask)
         per_line = samples.counts.max(axis=1) if self.scan.plane_axes[1] == "kx" else samples.counts
         self.readouts += int(per_line.sum())
         return samples
@@ -138,6 +145,7 @@ class Inspector:
             When no sample of the scan differs from zero.
         """
         scan = self.scan
+        self._time_average = None if self.union is None else self.union.as_dict()
         if self.largest == 0.0:
             raise InvalidScan("/kspace holds only zeros; write the measured samples")
         if not SMALLEST_VALUE <= self.largest <= LARGEST_VALUE:
@@ -156,6 +164,7 @@ class Inspector:
             axes=scan.axes,
             sampling={
                 **self.sampling.as_dict(),
+                "time_average_calibration": self._time_average,
                 "readouts": self.readouts,
                 **coverage_facts(self._coverage(), _fields_mm(scan)),
             },
@@ -225,33 +234,12 @@ class Inspector:
         found.extend(averages_finding(self.sampling))
         found.extend(readout_finding(self.sampling, scan.plane_axes))
         found.extend(partial_fourier_findings(self._coverage()))
-        found.extend(self._calibration_finding())
-        return found
-
-    def _calibration_finding(self) -> list[Finding]:
-        rows, columns = self.sampling.calibration
-        is_small = any(
-            min(COMFORTABLE_BLOCK, n) > have
-            for n, have in zip(self.scan.plane_shape, (rows, columns), strict=True)
-        )
-        if (
-            self.scan.coils == 1
-            or self.scan.reference_array is not None
-            or self.scan.sensitivity_array is not None
-        ):
-            return []
-        if not is_small:
-            return []
-        return [
-            Finding(
-                "calibration-small",
-                "warning",
-                f"The fully sampled centre of k-space is {rows} x {columns}; coil maps want {COMFORTABLE_BLOCK} or "
-                f"more a side, and need {SMALLEST_BLOCK}: sample more of the centre, add /reference or supply maps.",
-                "/mask",
-                {"rows": rows, "columns": columns},
+        needs_calibration = scan.coils > 1 and scan.reference_array is None and scan.sensitivity_array is None
+        if needs_calibration:
+            found.extend(
+                calibration_findings(self.sampling.calibration, self._time_average, scan.plane_shape)
             )
-        ]
+        return found
 
 
 def _along_readout(holds: NDArray[np.bool_], scan: Scan) -> NDArray[np.bool_]:

@@ -20,7 +20,7 @@ import numpy as np
 from numpy.typing import NDArray
 from threadpoolctl import threadpool_limits
 
-from recon.coils.maps import CoilMaps
+from recon.coils.maps import CoilMaps, MapFigures
 from recon.consistency import ResidualFigures
 from recon.errors import InvalidScan
 from recon.formats import ImageWriter, open_scan
@@ -181,7 +181,7 @@ def _run(
             sink.write("image", index, result.image)
             sink.write("residual_image", index, result.residual_image)
         tell.finished(done.group[0])
-    return build_report(preparation, residuals, solver, shelf.shares, provenance)
+    return build_report(preparation, residuals, solver, shelf.figures, provenance)
 
 
 def _one_thread_for_each_plane() -> threadpool_limits:
@@ -203,7 +203,7 @@ class _MapShelf:
 
     def __init__(self, preparation: Preparation, tell: _Teller, size: int) -> None:
         self.preparation, self.tell, self.size = preparation, tell, size
-        self.shares: dict[int, float] = {}
+        self.figures: dict[int, MapFigures] = {}
         self._kept: OrderedDict[int, CoilMaps] = OrderedDict()
         self._locks: dict[int, threading.Lock] = {}
         self._lock = threading.Lock()
@@ -218,10 +218,9 @@ class _MapShelf:
             maps = self._kept.get(position)
             if maps is None:
                 self.tell("coil-maps")
-                blocks = self.preparation.whitened_blocks(position)
-                maps = self.preparation.map_maker().make(position, blocks)
+                maps = self.preparation.make_maps(position)
         with self._lock:
-            self.shares[position] = maps.object_share
+            self.figures[position] = maps.figures
             self._kept[position] = maps
             while len(self._kept) > self.size:
                 self._kept.popitem(last=False)

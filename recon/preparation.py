@@ -4,26 +4,22 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
-from typing import Any, Final, NamedTuple
+from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
-from recon.averages import Samples, block_scale, relative_weights
-from recon.coils.calibration import LARGEST_BLOCK, calibration_block, check_block, crop_block
+from recon.averages import relative_weights
 from recon.coils.compression import Compression
-from recon.coils.maps import MapMaker, MapMethod, squared_gain
+from recon.coils.gathering import Calibration, Gatherer
+from recon.coils.maps import CoilMaps, MapMaker, MapMethod, squared_gain
 from recon.coils.noise import Whitening, estimate_whitening
-from recon.errors import InvalidScan
 from recon.feasibility import check_job, needs_maps
 from recon.inspection import Inspection, Inspector, check_finite
 from recon.operators.fourier import crop_readout
 from recon.scan import PlaneIndex, Scan, cropped_readout
 from recon.settings import Settings
 from recon.strengths import resolve_strengths
-
-#: frames and contrasts of one slice that share in its calibration.
-BLOCKS_PER_SLICE: Final = 8
 
 Report = Callable[[str, float], None]
 
@@ -62,8 +58,8 @@ class Preparation:
         Of a plane as it is solved; `image_columns` of them are kept.
     kappa : float
         u = kappa m: noise units over image units.
-    blocks : dict
-        Raw calibration blocks by slice, scaled so that their noise is that of the whitener.
+    calibration : dict
+        What the maps are computed from, by slice.
     mean_count : float
         Samples behind a sampled position, in the mean.
     """
@@ -77,17 +73,14 @@ class Preparation:
     shape: tuple[int, int]
     image_columns: int
     kappa: float
-    blocks: dict[int, list[NDArray[Any]]]
+    calibration: dict[int, Calibration]
     mean_count: float = 1.0
 
-    def map_maker(self) -> MapMaker:
-        """The maker of each slice's maps."""
+    def make_maps(self, position: int) -> CoilMaps:
+        """Coil maps of one slice."""
         assert self.map_method is not None
-        return MapMaker(self.scan, self.map_method, self.whitening, self.compression, self.shape)
-
-    def whitened_blocks(self, position: int) -> list[NDArray[Any]]:
-        """Whitened calibration blocks of one slice."""
-        return [self.whitening.apply(block) for block in self.blocks[position]]
+        maker = MapMaker(self.scan, self.map_method, self.whitening, self.compression, self.shape)
+        return maker.make(position, self.calibration[position])
 
     def load(self, index: PlaneIndex) -> Plane:
         """One plane of the scan, ready to be solved."""
@@ -146,11 +139,11 @@ def prepare(scan: Scan, settings: Settings, report: Report) -> Preparation:
     """
     method = _map_method(scan, settings)
     shape = _solved_shape(scan)
-    inspection, blocks, shape = _read(scan, shape, method, report)
+    inspection, calibration, shape = _read(scan, shape, method, report)
     mean_count = float(inspection.sampling["samples_per_position"]["mean"])
     if mean_count != 1:
-        unit = np.float32(1 / np.sqrt(mean_count))
-        blocks = {position: [unit * block for block in of_slice] for position, of_slice in blocks.items()}
+        unit = float(1 / np.sqrt(mean_count))
+        calibration = {position: each.scaled(unit) for position, each in calibration.items()}
     check_job(inspection.as_dict(), settings)
     check_finite(scan)
     report("whiten", 0.0)
@@ -159,10 +152,11 @@ def prepare(scan: Scan, settings: Settings, report: Report) -> Preparation:
     report("crop", 0.0)
     report("compress", 0.0)
     gram = np.zeros((scan.coils, scan.coils), np.complex128)
-    for block in (block for of_slice in blocks.values() for block in of_slice):
+    blocks = [block for of_slice in calibration.values() for block in of_slice.blocks]
+    for block in blocks:
         samples = whitening.apply(block).reshape(scan.coils, -1).astype(np.complex128)
         gram += samples @ samples.conj().T / samples.shape[1]
-    gram /= sum(len(of_slice) for of_slice in blocks.values())
+    gram /= len(blocks)
     # one coil has nothing to compress, and images coil by coil use all of them
     rule = None if method in (None, "single-coil") or scan.coils == 1 else resolved.coil_compression
     compression = Compression(gram, rule, has_noise_units=whitening.has_noise_units)
@@ -179,14 +173,8 @@ def prepare(scan: Scan, settings: Settings, report: Report) -> Preparation:
         map_method=method,
         shape=shape,
         image_columns=cropped_readout(scan),
-        kappa=float(
-            np.sqrt(
-                squared_gain(
-                    [block for of_slice in blocks.values() for block in of_slice], whitening, compression
-                )
-            )
-        ),
-        blocks=blocks,
+        kappa=float(np.sqrt(squared_gain(blocks, whitening, compression))),
+        calibration=calibration,
         mean_count=mean_count,
     )
 
@@ -222,13 +210,11 @@ def _solved_shape(scan: Scan) -> tuple[int, int]:
 
 def _read(
     scan: Scan, shape: tuple[int, int], method: MapMethod | None, report: Report
-) -> tuple[Inspection, dict[int, list[NDArray[Any]]], tuple[int, int]]:
-    """One pass over all data: facts, each slice's calibration blocks, and the shape of a plane as it is solved."""
+) -> tuple[Inspection, dict[int, Calibration], tuple[int, int]]:
+    """One pass over all data: facts, what each slice is calibrated from, and the shape of a plane as it is solved."""
     inspector = Inspector(scan)
-    blocks: dict[int, list[NDArray[Any]]] = {}
+    gatherer = Gatherer(scan, shape, needs_full=method in ("eigenvector", "adaptive"))
     planes = scan.planes()
-    shared = len(planes) // scan.axes.get("slice", 1)
-    chosen = {round(step * shared / BLOCKS_PER_SLICE) for step in range(BLOCKS_PER_SLICE)} if shared else {0}
     for done, index in enumerate(planes):
         report("read", done / len(planes))
         samples = inspector.read(index)
@@ -236,60 +222,5 @@ def _read(
         if shape[1] != scan.plane_shape[1] and (samples.counts != samples.counts[:, :1]).any():
             # a partial echo that only the data show: its readouts cannot be transformed, and so not cropped, either
             return _read(scan, scan.plane_shape, method, report)
-        if done % shared in chosen:
-            of_slice = blocks.setdefault(index.slice, [])
-            needs_full = method in ("eigenvector", "adaptive")
-            if scan.reference_array is None:
-                of_slice.append(_block(shape, samples, must_be_full=needs_full))
-            elif not of_slice:
-                centre = _block(shape, samples, must_be_full=False)
-                of_slice.append(_reference_block(scan, shape, index.slice, centre))
-    return inspector.finish(), blocks, shape
-
-
-def _block(shape: tuple[int, int], samples: Samples, *, must_be_full: bool) -> NDArray[Any]:
-    """Central block of one plane with the noise of one sample, readout oversampling removed where that is possible."""
-    columns = shape[1]
-    kspace, counts = samples
-    if columns != counts.shape[1]:
-        rows = min(2 * LARGEST_BLOCK, counts.shape[0])
-        centre = crop_block(counts, rows, counts.shape[1])
-        kspace = crop_readout(crop_block(kspace, rows, counts.shape[1]), columns)
-        counts = np.broadcast_to(centre[:, :1], (rows, columns))
-    if must_be_full:
-        block = calibration_block(kspace, counts > 0)
-    else:
-        # only the coils' mutual strength is wanted, which gaps do not change
-        block = crop_block(kspace, *(min(LARGEST_BLOCK, n) for n in counts.shape))
-    scale = block_scale(crop_block(counts, *block.shape[1:]))
-    return block if scale == 1 else block * np.float32(scale)
-
-
-def _reference_block(scan: Scan, shape: tuple[int, int], position: int, centre: NDArray[Any]) -> NDArray[Any]:
-    """Raw central block of `/reference`, brought to the scale of the scan.
-
-    A calibration measured separately may have another receiver gain; maps do not depend on it, but what counts as
-    signal does. The scale is that of the positions which the scan has sampled too.
-
-    Parameters
-    ----------
-    shape : (rows, columns)
-        Of a plane as it is solved.
-    centre : complex (coil, rows, columns)
-        Central block of the scan, zero where not sampled.
-    """
-    reference = scan.reference(position)
-    assert reference is not None
-    if not reference.any():
-        raise InvalidScan(
-            f"/reference of slice {position} is zero everywhere; write it as measured or leave it out"
-        )
-    kept = max(1, round(reference.shape[2] * shape[1] / scan.plane_shape[1]))
-    cropped = crop_readout(reference, kept)
-    check_block(cropped.shape[1], kept, shape, "/reference")
-    block = crop_block(cropped, min(cropped.shape[1], LARGEST_BLOCK), min(kept, LARGEST_BLOCK))
-    sides = min(block.shape[1], centre.shape[1]), min(block.shape[2], centre.shape[2])
-    ours, theirs = crop_block(centre, *sides), crop_block(block, *sides)
-    theirs = theirs * np.any(ours != 0, axis=0)
-    scale = np.linalg.norm(ours) / np.linalg.norm(theirs) if theirs.any() else 1.0
-    return np.asarray(block * np.float32(scale), np.complex64)
+        gatherer.see(index, samples)
+    return inspector.finish(), gatherer.finish(), shape

@@ -7,6 +7,7 @@ from typing import Any, Final
 
 from recon.caution import CAUTION
 from recon.coils.findings import map_findings, noise_findings
+from recon.coils.maps import MapFigures
 from recon.consistency import ResidualFigures
 from recon.findings import Finding
 from recon.operators.wavelet import Wavelet
@@ -91,15 +92,15 @@ def build_report(
     preparation: Preparation,
     residuals: ResidualFigures,
     solver: SolverFigures,
-    map_shares: Mapping[int, float],
+    map_figures: Mapping[int, MapFigures],
     provenance: Mapping[str, Any],
 ) -> dict[str, Any]:
     """Put the stages' figures together.
 
     Parameters
     ----------
-    map_shares : mapping
-        Share of the object inside the coil maps, by slice.
+    map_figures : mapping
+        How the coil maps were made, by slice.
 
     Returns
     -------
@@ -112,7 +113,7 @@ def build_report(
     findings = [
         *inspection.findings,
         *noise_findings(preparation.whitening, scan.noise_attributes, scan.attributes),
-        *map_findings(map_shares),
+        *map_findings(map_figures),
         *solver.findings(preparation),
     ]
     figures = residuals.as_dict()
@@ -135,7 +136,16 @@ def build_report(
         "consistency": figures,
         "solver": solver.as_dict(preparation),
         "sampling": inspection.sampling,
-        "preparation": preparation.figures(),
+        "preparation": _preparation(preparation, map_figures),
         "settings": preparation.settings.model_dump(mode="json"),
         "provenance": dict(provenance),
     }
+
+
+def _preparation(preparation: Preparation, map_figures: Mapping[int, MapFigures]) -> dict[str, Any]:
+    """The stages' figures before the solve, those of each slice's maps included."""
+    figures = preparation.figures()
+    slices = [{"slice": position, **map_figures[position].as_dict()} for position in sorted(map_figures)]
+    sources = sorted({each["source"] for each in slices})
+    figures["coil_maps"] |= {"source": sources[0] if len(sources) == 1 else "mixed", "slices": slices}
+    return figures

@@ -2,14 +2,19 @@
 
 from __future__ import annotations
 
-from typing import Any
+from collections.abc import Mapping
+from typing import Any, Final
 
 import numpy as np
 import scipy.fft
 from numpy.typing import NDArray
 
-from recon.coils.calibration import central_block
+from recon.coils.calibration import SMALLEST_BLOCK, central_block, prefers_time_average
 from recon.findings import Finding
+from recon.scan import PlaneIndex
+
+#: a calibration region below this side gives coarse maps.
+COMFORTABLE_BLOCK: Final = 16
 
 
 class SamplingFacts:
@@ -82,6 +87,40 @@ class SamplingFacts:
             "varies_along_readout": self.varies_along_columns,
             "samples_per_position": {"fewest": self.fewest, "most": self.most, "mean": self.mean_count},
         }
+
+
+class FrameUnion:
+    """The calibration region of the time average: of all positions that any frame of a slice and contrast sampled.
+
+    Planes come slice by slice, and only the current slice's masks are held.
+    """
+
+    def __init__(self) -> None:
+        self._slice = 0
+        self._masks: dict[int, NDArray[np.bool_]] = {}
+        self._smallest: tuple[int, int] | None = None
+
+    def see(self, index: PlaneIndex, mask: NDArray[np.bool_]) -> None:
+        """Take in one plane's mask."""
+        if index.slice != self._slice:
+            self._close()
+            self._slice = index.slice
+        known = self._masks.get(index.contrast)
+        self._masks[index.contrast] = mask if known is None else known | mask
+
+    def _close(self) -> None:
+        for mask in self._masks.values():
+            sides = central_block(mask)
+            if self._smallest is None or sides[0] * sides[1] < self._smallest[0] * self._smallest[1]:
+                self._smallest = sides
+        self._masks = {}
+
+    def as_dict(self) -> dict[str, int] | None:
+        """Rows and columns of the worst slice; None where nothing was seen."""
+        self._close()
+        if self._smallest is None:
+            return None
+        return {"rows": int(self._smallest[0]), "columns": int(self._smallest[1])}
 
 
 def peak_side_lobe(mask: NDArray[np.bool_]) -> float:
@@ -161,3 +200,47 @@ def averages_finding(facts: SamplingFacts) -> list[Finding]:
             numbers,
         )
     ]
+
+
+def calibration_findings(
+    single: tuple[int, int], time_average: Mapping[str, int] | None, shape: tuple[int, int]
+) -> list[Finding]:
+    """Findings about the region that coil maps are computed from.
+
+    Parameters
+    ----------
+    single : (rows, columns)
+        Fully sampled centre of the worst plane.
+    time_average : mapping or None
+        See `FrameUnion.as_dict`.
+    shape : (rows, columns)
+        Of a plane.
+    """
+    rows, columns = single
+    found = []
+    average = (0, 0) if time_average is None else (time_average["rows"], time_average["columns"])
+    if prefers_time_average(single, average):
+        rows, columns = average
+        found.append(
+            Finding(
+                "calibration-time-average",
+                "info",
+                f"The frames together sample a centre of {rows} x {columns}, one alone {single[0]} x {single[1]}, so "
+                f"coil maps come from the mean over the frames: keep the coils in place from frame to frame.",
+                "/mask",
+                {"rows": rows, "columns": columns},
+            )
+        )
+    sides = zip(shape, (rows, columns), strict=True)
+    if any(have < min(COMFORTABLE_BLOCK, n) for n, have in sides):
+        found.append(
+            Finding(
+                "calibration-small",
+                "warning",
+                f"The fully sampled centre of k-space is {rows} x {columns}; coil maps want {COMFORTABLE_BLOCK} or "
+                f"more a side, and need {SMALLEST_BLOCK}: sample more of the centre, add /reference or supply maps.",
+                "/mask",
+                {"rows": rows, "columns": columns},
+            )
+        )
+    return found

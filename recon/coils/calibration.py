@@ -53,27 +53,31 @@ def _centred_run(line: NDArray[np.bool_]) -> int:
     return max(0, min(2 * low + 1, 2 * high))
 
 
+def is_large_enough(rows: int, columns: int, shape: tuple[int, int]) -> bool:
+    """Whether coil maps can be computed from a block, sides shorter than `SMALLEST_BLOCK` only where the matrix is."""
+    return rows >= min(SMALLEST_BLOCK, shape[0]) and columns >= min(SMALLEST_BLOCK, shape[1])
+
+
 def check_block(rows: int, columns: int, shape: tuple[int, int], what: str) -> None:
     """Raise `CalibrationMissing` when a block is too small to compute coil maps from."""
-    needed = tuple(min(SMALLEST_BLOCK, n) for n in shape)
-    if rows < needed[0] or columns < needed[1]:
+    if not is_large_enough(rows, columns, shape):
+        needed = tuple(min(SMALLEST_BLOCK, n) for n in shape)
         raise CalibrationMissing(
             f"coil maps need a fully sampled centre of k-space of at least {needed[0]} x {needed[1]}; {what} has "
             f"{rows} x {columns}: sample a calibration region, add /reference, or supply maps as /sensitivity"
         )
 
 
-def calibration_block(kspace: NDArray[Any], mask: NDArray[np.bool_]) -> NDArray[Any]:
-    """The block of one plane that maps are computed from, (coil, at most `LARGEST_BLOCK` a side).
+def prefers_time_average(single: tuple[int, int], average: tuple[int, int]) -> bool:
+    """Whether the mean over the frames serves maps better than single frames: when its centre is the larger one.
 
-    Raises
-    ------
-    CalibrationMissing
-        When the fully sampled centre is too small.
+    Parameters
+    ----------
+    single, average : (rows, columns)
+        Fully sampled centre of the worst frame, and of the mean.
     """
-    rows, columns = central_block(mask)
-    check_block(rows, columns, (mask.shape[0], mask.shape[1]), "the mask")
-    return crop_block(kspace, min(rows, LARGEST_BLOCK), min(columns, LARGEST_BLOCK))
+    sides = [tuple(min(LARGEST_BLOCK, n) for n in block) for block in (single, average)]
+    return sides[1][0] * sides[1][1] > sides[0][0] * sides[0][1]
 
 
 def crop_block(kspace: NDArray[Any], rows: int, columns: int) -> NDArray[Any]:

@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from typing import Any, Final
 
+from recon.coils.maps import MapFigures
 from recon.coils.noise import Whitening
 from recon.findings import Finding
 
@@ -57,14 +58,15 @@ def noise_findings(
     return found
 
 
-def map_findings(shares: Mapping[int, float]) -> list[Finding]:
+def map_findings(figures: Mapping[int, MapFigures]) -> list[Finding]:
     """Findings about maps that leave out part of the object.
 
     Parameters
     ----------
-    shares : mapping
-        Share of the object inside the maps, by slice.
+    figures : mapping
+        How the maps were made, by slice.
     """
+    shares = {position: each.object_share for position, each in figures.items()}
     poor = {position: share for position, share in shares.items() if share < 1 - LARGEST_SHARE_LEFT_OUT}
     if not poor:
         return []

@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 from recon.coils.adaptive import adaptive_maps, low_resolution_images
 from recon.coils.compression import Compression
 from recon.coils.eigenvector import eigenvector_maps, nearest
+from recon.coils.gathering import Calibration
 from recon.coils.noise import Whitening, mix
 from recon.errors import InvalidScan
 from recon.operators.fourier import crop_centre
@@ -29,22 +30,44 @@ HANN_POWER: Final = 9 / 64
 
 
 @dataclass(frozen=True)
+class MapFigures:
+    """How the maps of one slice were made.
+
+    Attributes
+    ----------
+    source : {"scan", "time-average", "reference", "supplied", "none"}
+    block : (rows, columns) or None
+        Of the calibration they were computed from.
+    object_share : float
+        Share of the object, at the resolution of the calibration, where the maps are not zero.
+    """
+
+    source: str
+    block: tuple[int, int] | None = None
+    object_share: float = 1.0
+
+    def as_dict(self) -> dict[str, Any]:
+        """Plain JSON form."""
+        block = None if self.block is None else {"rows": self.block[0], "columns": self.block[1]}
+        return {"source": self.source, "block": block, "object_share": self.object_share}
+
+
+@dataclass(frozen=True)
 class CoilMaps:
     """Maps of one slice.
 
     Attributes
     ----------
     virtual : complex64 (virtual coil, rows, columns)
-        Whitened and compressed, for an image in the object's intensity; zero outside the object.
+        Whitened and blocks, for an image in the object's intensity; zero outside the object.
     whitened : complex64 (coil, rows, columns)
         The same in all whitened physical coils.
-    object_share : float
-        Share of the object, at the resolution of the calibration, where the maps are not zero.
+    figures : MapFigures
     """
 
     virtual: NDArray[np.complex64]
     whitened: NDArray[np.complex64]
-    object_share: float = 1.0
+    figures: MapFigures
 
     @property
     def support(self) -> NDArray[np.bool_]:
@@ -79,38 +102,56 @@ class MapMaker:
         self.compression = compression
         self.shape = shape
 
-    def make(self, position: int, blocks: list[NDArray[Any]]) -> CoilMaps:
-        """Maps of one slice from its whitened calibration blocks (not needed for supplied maps).
+    def make(self, position: int, calibration: Calibration) -> CoilMaps:
+        """Maps of one slice.
+
+        Parameters
+        ----------
+        position : int
+            Of the slice.
+        calibration : Calibration
+            Raw; of supplied maps it only says where the object is.
 
         Raises
         ------
         InvalidScan
             When supplied maps are zero everywhere.
         """
-        compressed = [self.compression.apply(block) for block in blocks]
+        blocks = [self.compression.apply(self.whitening.apply(block)) for block in calibration.blocks]
         if self.method == "supplied":
-            return self._supplied(position)
+            return self._supplied(position, calibration, blocks)
         if self.method == "single-coil":
             virtual = np.ones((1, *self.shape), np.complex64)
         elif self.method == "adaptive":
-            virtual = adaptive_maps(compressed, self.shape, self.compression.reference)
+            virtual = adaptive_maps(blocks, self.shape, self.compression.reference)
         else:
             virtual, _ = eigenvector_maps(
-                compressed,
+                blocks,
                 self.shape,
                 self.compression.reference,
                 # the noise of a separate calibration is not that of the scan
-                has_noise_units=self.whitening.has_noise_units and self.scan.reference_array is None,
+                has_noise_units=self.whitening.has_noise_units and calibration.source != "reference",
             )
         whitened = self.compression.expand(virtual)
         scale = _inverse_size(mix(self.whitening.unwhitener, whitened))
-        inside = np.any(virtual != 0, axis=0)
-        share = 1.0 if inside.all() else _object_share(compressed, inside, self.whitening.has_noise_units)
+        if self.method == "single-coil":
+            figures = MapFigures("none")
+        else:
+            share = self._object_share(calibration, blocks, np.any(virtual != 0, axis=0))
+            figures = MapFigures(calibration.source, calibration.sides, share)
         return CoilMaps(
-            np.asarray(virtual * scale, np.complex64), np.asarray(whitened * scale, np.complex64), share
+            np.asarray(virtual * scale, np.complex64), np.asarray(whitened * scale, np.complex64), figures
         )
 
-    def _supplied(self, position: int) -> CoilMaps:
+    def _object_share(
+        self, calibration: Calibration, blocks: list[NDArray[Any]], inside: NDArray[np.bool_]
+    ) -> float:
+        # gaps in the calibration would show the object where it is not
+        if inside.all() or not calibration.is_full:
+            return 1.0
+        return _object_share(blocks, inside, self.whitening.has_noise_units)
+
+    def _supplied(self, position: int, calibration: Calibration, blocks: list[NDArray[Any]]) -> CoilMaps:
         physical = self.scan.sensitivity(position)
         if physical is None:
             raise InvalidScan(
@@ -124,7 +165,10 @@ class MapMaker:
             )
         physical = physical / np.abs(physical).max()  # so that squares stay in range
         whitened = self.whitening.apply(physical * _inverse_size(physical))
-        return CoilMaps(self.compression.apply(whitened), whitened)
+        share = self._object_share(calibration, blocks, np.any(physical != 0, axis=0))
+        return CoilMaps(
+            self.compression.apply(whitened), whitened, MapFigures("supplied", object_share=share)
+        )
 
 
 def _object_share(blocks: list[NDArray[Any]], inside: NDArray[np.bool_], has_noise_units: bool) -> float:

@@ -124,7 +124,8 @@ def test_calibration_block_has_the_noise_of_the_whitener() -> None:
     """The centre is quieter than the mean: its block is scaled so that unit noise is what the maps see."""
     scan, clean, _ = repeated(centre_repeated())
     preparation = prepare(scan, Settings(), silently)
-    (block,) = preparation.whitened_blocks(0)
+    (raw,) = preparation.calibration[0].blocks
+    block = preparation.whitening.apply(raw)
     inside = preparation.whitening.apply(clean.astype(np.complex64))[:, 16:32, 6:38]
     level = np.vdot(inside, block).real / np.vdot(inside, inside).real
     assert level == pytest.approx(np.sqrt(4 / 2.5), rel=0.01)
