@@ -58,7 +58,7 @@ def check_job(facts: Mapping[str, Any], settings: Settings) -> None:
         return
     if not needs_maps(settings, coils):
         return
-    matrix = tuple(facts["image"]["matrix"])
+    matrix = tuple(facts["image"]["solved_plane"])
     if facts["objects"]["reference"] is not None:
         rows, columns = facts["objects"]["reference"]
         check_block(rows, columns, (matrix[0], matrix[1]), "/reference")

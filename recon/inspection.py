@@ -19,6 +19,7 @@ from recon.coverage import Coverage, coverage, coverage_facts, partial_fourier_f
 from recon.errors import InvalidScan
 from recon.findings import Finding
 from recon.formats.image_layout import voxel_size_mm
+from recon.grid import image_grid
 from recon.sampling import (
     FrameUnion,
     SamplingFacts,
@@ -153,13 +154,12 @@ class Inspector:
                 f"the largest value of /kspace is {self.largest:.1e}; accepted is {SMALLEST_VALUE:g} to "
                 f"{LARGEST_VALUE:g}: multiply /kspace and /noise by one factor that brings it near 1"
             )
-        rows, columns = scan.plane_shape[0], cropped_readout(scan)
+        grid = image_grid(scan)
         encoded = scan.plane_shape[1]
-        solved = encoded if self.sampling.varies_along_columns else columns
+        solved = encoded if self.sampling.varies_along_columns else cropped_readout(scan)
         reference = _matrix(scan.reference_array, scan.plane_axes)
         if reference is not None:
             reference[1] = max(1, round(reference[1] * solved / encoded))
-        voxel = voxel_size_mm(scan, (rows, columns))
         return Inspection(
             axes=scan.axes,
             sampling={
@@ -176,8 +176,9 @@ class Inspector:
             },
             image={
                 "axes": list(scan.image_axes),
-                "matrix": [rows, columns],
-                "pixel_size_mm": None if voxel is None else list(voxel),
+                "matrix": list(grid.written),
+                "solved_plane": [scan.plane_shape[0], solved],
+                "pixel_size_mm": voxel_size_mm(scan, grid),
             },
             title=scan.title,
             findings=[*scan.findings, *self._findings()],

@@ -145,7 +145,7 @@ def reconstruct_file(
     tell = _Teller(progress)
     with _one_thread_for_each_plane(), open_scan(scan_path) as scan:
         preparation = prepare(scan, settings or Settings(), tell.preparing)
-        with ImageWriter(image_path, scan, (preparation.shape[0], preparation.image_columns)) as writer:
+        with ImageWriter(image_path, scan, preparation.grid) as writer:
             report = _run(preparation, writer, tell, provenance or {}, threads)
             tell("write", _PLANES_DONE)
             writer.finish(report, provenance or {})

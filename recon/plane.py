@@ -14,7 +14,7 @@ from recon.coils.combination import root_sum_of_squares
 from recon.coils.maps import CoilMaps
 from recon.coils.noise import mix
 from recon.linear import density_weights, tikhonov, zero_filled
-from recon.operators.fourier import crop_centre, inverse_transform
+from recon.operators.fourier import inverse_transform
 from recon.preparation import Plane, Preparation
 from recon.problem import make_problem, measurement
 from recon.solver import Solution, solve
@@ -28,8 +28,8 @@ class PlaneResult:
 
     Attributes
     ----------
-    image : complex64 (rows, image columns)
-    residual_image : complex64 (rows, image columns)
+    image, residual_image : complex64
+        On the grid that is written (see `recon.grid`).
     residuals : complex64 (coil, rows, columns)
         Whitened and weighted, so that noise of unit variance is expected; zero where not sampled.
     solution : Solution or None
@@ -114,20 +114,17 @@ def _finish(
     difference = consistency.residual_image(residuals, maps.whitened)
     if plane.weights is not None:
         residuals = residuals * plane.weights
+    written = preparation.grid.apply
     if preparation.settings.combination == "root-sum-of-squares":
-        m = root_sum_of_squares(mix(preparation.whitening.unwhitener, maps.whitened * m))
-    return PlaneResult(_cropped(preparation, m), _cropped(preparation, difference), residuals, solution)
+        # magnitudes are taken last: interpolated ones would fall below zero
+        image = root_sum_of_squares(written(mix(preparation.whitening.unwhitener, maps.whitened * m)))
+    else:
+        image = written(m)
+    return PlaneResult(image, written(difference), residuals, solution)
 
 
 def _coil_by_coil(preparation: Preparation, plane: Plane) -> PlaneResult:
     """Root-sum-of-squares of density-compensated coil images: they reproduce their samples, so no residual is left."""
     images = inverse_transform(plane.kspace * density_weights(plane.mask))
-    image = root_sum_of_squares(mix(preparation.whitening.unwhitener, images))
-    nothing = np.zeros_like(image)
-    return PlaneResult(
-        _cropped(preparation, image), _cropped(preparation, nothing), np.zeros_like(plane.kspace), None
-    )
-
-
-def _cropped(preparation: Preparation, plane: NDArray[Any]) -> NDArray[np.complex64]:
-    return np.ascontiguousarray(crop_centre(plane, preparation.image_columns), np.complex64)
+    image = root_sum_of_squares(preparation.grid.apply(mix(preparation.whitening.unwhitener, images)))
+    return PlaneResult(image, np.zeros_like(image), np.zeros_like(plane.kspace), None)

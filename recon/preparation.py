@@ -15,6 +15,7 @@ from recon.coils.gathering import Calibration, Gatherer
 from recon.coils.maps import CoilMaps, MapMaker, MapMethod, squared_gain
 from recon.coils.noise import Whitening, estimate_whitening
 from recon.feasibility import check_job, needs_maps
+from recon.grid import ImageGrid, image_grid
 from recon.inspection import Inspection, Inspector, check_finite
 from recon.operators.fourier import crop_readout
 from recon.scan import PlaneIndex, Scan, cropped_readout
@@ -55,7 +56,9 @@ class Preparation:
     settings : Settings
         As resolved: no strength is `auto` any more, nor the map method where maps are made.
     shape : (rows, columns)
-        Of a plane as it is solved; `image_columns` of them are kept.
+        Of a plane as it is solved.
+    grid : ImageGrid
+        What is kept and written of it.
     kappa : float
         u = kappa m: noise units over image units.
     calibration : dict
@@ -71,7 +74,7 @@ class Preparation:
     compression: Compression
     map_method: MapMethod | None
     shape: tuple[int, int]
-    image_columns: int
+    grid: ImageGrid
     kappa: float
     calibration: dict[int, Calibration]
     mean_count: float = 1.0
@@ -109,7 +112,13 @@ class Preparation:
         return {
             "whitening": {"source": self.whitening.source, "samples": self.whitening.samples},
             "averages": {"mean_count": self.mean_count},
-            "readout_crop": {"from": self.scan.plane_shape[1], "to": self.image_columns},
+            "matrix": {
+                "axes": list(self.grid.axes),
+                "encoded": list(self.grid.encoded),
+                "solved": list(self.shape),
+                "kept": list(self.grid.kept),
+                "written": list(self.grid.written),
+            },
             "coil_compression": {
                 "coils": self.scan.coils,
                 "virtual_coils": self.compression.coils,
@@ -172,7 +181,7 @@ def prepare(scan: Scan, settings: Settings, report: Report) -> Preparation:
         compression=compression,
         map_method=method,
         shape=shape,
-        image_columns=cropped_readout(scan),
+        grid=image_grid(scan),
         kappa=float(np.sqrt(squared_gain(blocks, whitening, compression))),
         calibration=calibration,
         mean_count=mean_count,

@@ -64,7 +64,7 @@ class SamplingFacts:
             return
         self._seen.add(key)
         for axis, covered in enumerate(self.covered):
-            covered |= mask.any(axis=1 - axis)
+            covered |= mask.any(axis=tuple(other for other in range(mask.ndim) if other != axis))
         rows, columns = central_block(mask)
         if rows * columns < self.calibration[0] * self.calibration[1] or len(self._seen) == 1:
             self.calibration = (rows, columns)

@@ -69,6 +69,13 @@ def _direction(value: Any) -> Value | None:
     return numbers
 
 
+def _matrix(value: Any) -> Value | None:
+    numbers = _exactly(3, positive=True)(value)
+    if not isinstance(numbers, list) or any(number != round(number) for number in numbers):
+        return None
+    return numbers
+
+
 def _patient_position(value: Any) -> Value | None:
     known = ("HFP", "HFS", "HFDR", "HFDL", "FFP", "FFS", "FFDR", "FFDL")
     position = text(value)
@@ -78,6 +85,8 @@ def _patient_position(value: Any) -> Value | None:
 KSPACE_ATTRIBUTES: Final[Mapping[str, Rule]] = {
     "field_of_view_mm": Rule("three positive numbers x, y, z in mm", _exactly(3, positive=True)),
     "readout_oversampling": Rule("a number from 1 to 16", _number(1, 16)),
+    "phase_oversampling": Rule("a number from 1 to 16", _number(1, 16)),
+    "reconstructed_matrix": Rule("three whole numbers x, y, z", _matrix),
     "slice_position_mm": Rule("three numbers for each slice, in mm", _numbers(3, positive=False)),
     "read_direction": Rule("a unit vector of three numbers", _direction),
     "phase_direction": Rule("a unit vector of three numbers", _direction),
@@ -91,11 +100,6 @@ KSPACE_ATTRIBUTES: Final[Mapping[str, Rule]] = {
 NOISE_ATTRIBUTES: Final[Mapping[str, Rule]] = {
     "sample_time_us": KSPACE_ATTRIBUTES["sample_time_us"],
     "receiver_noise_bandwidth": Rule("a number above 0 and up to 1", _number(0, 1, low_open=True)),
-}
-#: named by the layout, but their effect on the image is not built: refused unless they change nothing.
-NEUTRAL_ONLY: Final[Mapping[str, str]] = {
-    "phase_oversampling": "1",
-    "reconstructed_matrix": "the size of the image",
 }
 #: written by HDF5 libraries and by the axis labels themselves.
 _STRUCTURAL: Final = {
@@ -152,7 +156,7 @@ def read_attributes(
                     f"{where}: attribute {name} cannot be read; write it as a plain value"
                 ) from None
             values[name] = check_value(where, name, raw, rules)
-        elif name not in _STRUCTURAL and name not in NEUTRAL_ONLY:
+        elif name not in _STRUCTURAL:
             findings.append(
                 Finding(
                     "attribute-ignored",
@@ -163,30 +167,6 @@ def read_attributes(
                 )
             )
     return values, findings
-
-
-def check_neutral(found: h5py.Dataset, where: str, image_size_xyz: tuple[int, ...]) -> None:
-    """Refuse attributes that ask for something which would otherwise be silently left out.
-
-    Raises
-    ------
-    InvalidScan
-        When `phase_oversampling` is not 1, or `reconstructed_matrix` differs from the image.
-    """
-    for name, neutral in NEUTRAL_ONLY.items():
-        if name not in found.attrs:
-            continue
-        numbers = np.asarray(found.attrs[name])
-        is_neutral = numbers.dtype.kind in "fiu" and (
-            bool(np.all(numbers == 1))
-            if name == "phase_oversampling"
-            else tuple(numbers.reshape(-1).astype(int)) == image_size_xyz
-        )
-        if not is_neutral:
-            raise InvalidScan(
-                f"{where}: attribute {name} is {_shown(numbers)}; accepted is {neutral}: leave it out and crop or "
-                f"interpolate the image afterwards"
-            )
 
 
 def check_slices(values: Mapping[str, Value], slices: int) -> None:

@@ -13,11 +13,11 @@ import h5py
 import numpy as np
 from numpy.typing import NDArray
 
-from recon.axes import image_axis
 from recon.caution import CAUTION
 from recon.errors import InvalidScan
 from recon.formats import hdf5
-from recon.scan import PlaneIndex, Scan, cropped_readout
+from recon.grid import ImageGrid
+from recon.scan import PlaneIndex, Scan
 
 LAYOUT: Final = "fallow-image"
 LAYOUT_VERSION: Final = 1
@@ -67,18 +67,18 @@ class ImageWriter:
         Where to write; give a temporary name and rename when `finish` has returned.
     scan : Scan
         Supplies axes and geometry.
-    shape : (rows, columns)
+    grid : ImageGrid
         Of one image plane.
     """
 
-    def __init__(self, path: Path | str, scan: Scan, shape: tuple[int, int]) -> None:
+    def __init__(self, path: Path | str, scan: Scan, grid: ImageGrid) -> None:
         self._outer = scan.outer_axes
         sizes = [scan.axes[axis] for axis in self._outer]
         self._file = h5py.File(path, "w")
         self._file.attrs.update({"layout": LAYOUT, "layout_version": LAYOUT_VERSION, "caution": CAUTION})
         for name in ("image", "residual_image"):
-            self._create(name, (*sizes, *shape), scan.image_axes)
-        self._file["image"].attrs.update(geometry(scan))
+            self._create(name, (*sizes, *grid.written), scan.image_axes)
+        self._file["image"].attrs.update(geometry(scan, grid))
 
     def _create(self, name: str, shape: Sequence[int], axes: Sequence[str]) -> None:
         written = self._file.create_dataset(name, shape, dtype=np.complex64)
@@ -105,24 +105,22 @@ class ImageWriter:
         self._file.close()
 
 
-def geometry(scan: Scan) -> dict[str, Any]:
-    """Geometry attributes of the image: as in the scan, the field of view without readout oversampling."""
+def geometry(scan: Scan, grid: ImageGrid) -> dict[str, Any]:
+    """Geometry attributes of the image: as in the scan, the field of view without oversampling."""
     found = {name: scan.attributes[name] for name in _GEOMETRY if name in scan.attributes}
     if "field_of_view_mm" in found:
-        x, y, z = found["field_of_view_mm"]
-        cropped = cropped_readout(scan) / scan.plane_shape[1]
-        found["field_of_view_mm"] = [x * cropped, y, z]
+        pairs = zip("xyz", found["field_of_view_mm"], strict=True)
+        found["field_of_view_mm"] = [field * grid.share(axis) for axis, field in pairs]
     return found
 
 
-def voxel_size_mm(scan: Scan, shape: tuple[int, int]) -> tuple[float, float] | None:
-    """Pixel size (row, column) in mm, field of view over matrix; None where the field of view is unknown."""
-    fields = geometry(scan).get("field_of_view_mm")
+def voxel_size_mm(scan: Scan, grid: ImageGrid) -> list[float] | None:
+    """Pixel size in mm along the grid's axes, field of view over matrix; None where the field of view is unknown."""
+    fields = geometry(scan, grid).get("field_of_view_mm")
     if fields is None:
         return None
     by_axis = dict(zip("xyz", fields, strict=True))
-    rows, columns = (image_axis(axis) for axis in scan.plane_axes)
-    return by_axis[rows] / shape[0], by_axis[columns] / shape[1]
+    return [by_axis[axis] / size for axis, size in zip(grid.axes, grid.written, strict=True)]
 
 
 def read_image(path: Path | str) -> ImageFile:

@@ -17,12 +17,12 @@ from recon.formats import hdf5
 from recon.formats.attributes import (
     KSPACE_ATTRIBUTES,
     NOISE_ATTRIBUTES,
-    check_neutral,
     check_slices,
     check_value,
     read_attributes,
 )
-from recon.scan import Scan, cropped_readout
+from recon.grid import image_grid
+from recon.scan import Scan
 
 LAYOUT: Final = "fallow-scan"
 LAYOUT_VERSION: Final = 1
@@ -97,14 +97,8 @@ def _read(file: h5py.File) -> Scan:
         findings=findings,
         file=file,
     )
-    columns = cropped_readout(scan)
-    check_neutral(file["kspace"], "/kspace", _image_size_xyz(scan, columns))
+    image_grid(scan)  # refuses sizes that do not fit
     return scan
-
-
-def _image_size_xyz(scan: Scan, columns: int) -> tuple[int, ...]:
-    rows = scan.plane_shape[0]
-    return (columns, rows, 1) if scan.plane_axes == ("ky", "kx") else (1, columns, rows)
 
 
 def _check_layout(file: h5py.File) -> None:

@@ -51,6 +51,28 @@ def crop_centre(array: NDArray[Any], size: int, axis: int = -1) -> NDArray[Any]:
     return np.take(array, range(start, start + size), axis=axis)
 
 
+def zero_fill(images: NDArray[Any], shape: Sequence[int]) -> NDArray[Any]:
+    """Interpolate images to a finer matrix over the same field of view by filling k-space with zeros.
+
+    Index n//2 stays in place, and values keep their scale (the unitary transforms alone would change it by
+    sqrt(pixels before / pixels after)).
+
+    Parameters
+    ----------
+    images : complex (..., *coarse shape)
+    shape : sequence of int
+        Of the last axes, none smaller than before.
+    """
+    coarse = images.shape[images.ndim - len(shape) :]
+    axes = tuple(range(-len(shape), 0))
+    padded = np.zeros((*images.shape[: images.ndim - len(shape)], *shape), images.dtype)
+    starts = (n // 2 - m // 2 for n, m in zip(shape, coarse, strict=True))
+    window: tuple[Any, ...] = tuple(slice(start, start + m) for start, m in zip(starts, coarse, strict=True))
+    padded[(..., *window)] = transform(images, axes)
+    scale = images.real.dtype.type(np.sqrt(np.prod(shape) / np.prod(coarse)))
+    return np.asarray(inverse_transform(padded, axes) * scale)
+
+
 def crop_readout(kspace: NDArray[Any], columns: int) -> NDArray[Any]:
     """Remove readout oversampling: transform the last axis, keep the central field of view, transform back.
 

@@ -192,7 +192,8 @@ def test_unknown_attributes_and_objects_are_findings(tmp_path: Path) -> None:
 
 
 GOOD: dict[str, Any] = {
-    "field_of_view_mm": [100, 100, 5], "readout_oversampling": 2, "slice_position_mm": [[0, 0, 0]],
+    "field_of_view_mm": [100, 100, 5], "readout_oversampling": 2, "phase_oversampling": 1.3,
+    "reconstructed_matrix": [4, 6, 1], "slice_position_mm": [[0, 0, 0]],
     "read_direction": [1, 0, 0], "phase_direction": [0, 1, 0], "slice_direction": [0, 0, 1],
     "patient_position": "HFS", "slice_spacing_mm": 4, "frame_interval_ms": 30, "echo_times_ms": [3.0, 5.0],
     "sample_time_us": 5,
@@ -202,7 +203,9 @@ BAD: list[tuple[str, Any]] = [
     ("readout_oversampling", 0.5), ("readout_oversampling", np.nan), ("readout_oversampling", 3.0),
     ("slice_position_mm", [0, 0]), ("read_direction", [1, 1, 0]), ("patient_position", "upside down"),
     ("slice_spacing_mm", 0), ("frame_interval_ms", -1), ("echo_times_ms", [0.0]), ("sample_time_us", np.inf),
-    ("phase_oversampling", 1.5), ("reconstructed_matrix", [64, 64, 1]),
+    ("phase_oversampling", 0.9), ("phase_oversampling", "much"), ("reconstructed_matrix", [2, 4, 1]),
+    ("reconstructed_matrix", [4, 4]), ("reconstructed_matrix", [4.5, 4, 1]), ("reconstructed_matrix", [4, 4, 2]),
+    ("reconstructed_matrix", [4, 100_000, 1]),
 ]  # fmt: skip
 
 
