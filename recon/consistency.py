@@ -8,6 +8,7 @@ plays no part here: the residual is taken in all coils.
 
 from __future__ import annotations
 
+from itertools import pairwise
 from typing import Any, Final
 
 import numpy as np
@@ -21,6 +22,8 @@ from recon.scan import PlaneIndex
 
 #: width of a k-space ring, as a fraction of the distance from the centre to the edge.
 RING_WIDTH: Final = 0.1
+#: the readout positions of a volume are told in this many groups at most.
+READOUT_GROUPS: Final = 16
 
 
 def residual(
@@ -56,9 +59,14 @@ class ResidualFigures:
         estimated variance instead, is corrected by (n - 1) / n.
     sizes : dict
         Lengths of the scan's outer axes.
+    is_volume : bool
+        Whether slices are the readout positions of a volume, which are told in a few groups.
     """
 
-    def __init__(self, shape: tuple[int, int], whitening: Whitening, sizes: dict[str, int]) -> None:
+    def __init__(
+        self, shape: tuple[int, int], whitening: Whitening, sizes: dict[str, int], *, is_volume: bool = False
+    ) -> None:
+        self.is_volume = is_volume
         self.whitening = whitening
         coils = len(whitening.covariance)
         self.coil_correction = (whitening.samples - 1) / whitening.samples if whitening.samples > 1 else 1.0
@@ -112,8 +120,26 @@ class ResidualFigures:
             "by_ring": rings,
         }
         for axis, sums in self.by_outer.items():
-            figures[f"by_{axis}"] = _ratios(sums)
+            if axis == "slice" and self.is_volume:
+                figures["by_readout_position"] = _grouped(sums)
+            else:
+                figures[f"by_{axis}"] = _ratios(sums)
         return {"reduced_chi_squared": figures, "relative_residual": relative}
+
+
+def _grouped(sums: NDArray[Any]) -> list[dict[str, Any]]:
+    """Neighbouring positions together, so that a report does not grow with the matrix."""
+    positions = sums.shape[1]
+    edges = np.linspace(0, positions, min(positions, READOUT_GROUPS) + 1).astype(int)
+    return [
+        {
+            "from": int(start),
+            "to": int(end),
+            "value": _ratios(sums[:, start:end].sum(axis=1, keepdims=True))[0],
+            "samples": int(sums[1, start:end].sum()),
+        }
+        for start, end in pairwise(edges)
+    ]
 
 
 def _ratios(sums: NDArray[Any], correction: float = 1.0) -> list[float | None]:

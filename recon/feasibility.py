@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from typing import Any
+from typing import Any, NoReturn
 
 from recon.coils.calibration import check_block, prefers_time_average
 from recon.errors import InvalidScan, InvalidSettings
@@ -24,8 +24,10 @@ def check_job(facts: Mapping[str, Any], settings: Settings) -> None:
     CalibrationMissing
         When the settings need coil maps and there is nothing to compute them from.
     InvalidSettings
-        For more virtual coils than coils, or supplied maps that are not there.
+        For more virtual coils than coils, supplied maps that are not there, or a `volume` that the axes or the mask do
+        not fit.
     """
+    _check_volume(facts, settings)
     coils = int(facts["axes"].get("coil", 1))
     rule = settings.coil_compression
     wanted = getattr(rule, "coils", None)
@@ -50,10 +52,10 @@ def check_job(facts: Mapping[str, Any], settings: Settings) -> None:
         )
     if has_maps and settings.coil_maps in ("auto", "supplied"):
         encoded = int(facts["axes"]["kx" if "kx" in facts["axes"] else "ky"])
-        if facts["sampling"]["varies_along_readout"] and facts["objects"]["sensitivity"][1] < encoded:
+        if facts["sampling"]["varies_along_readout"] and facts["objects"]["sensitivity"][-1] < encoded:
             raise InvalidScan(
-                f"/sensitivity has {facts['objects']['sensitivity'][1]} columns, but the mask varies along kx, so that "
-                f"the plane is solved with its oversampling: supply maps with {encoded} columns"
+                f"/sensitivity has {facts['objects']['sensitivity'][-1]} columns, but the mask varies along kx, so "
+                f"that the image is solved with its oversampling: supply maps with {encoded} columns"
             )
         return
     if not needs_maps(settings, coils):
@@ -73,6 +75,29 @@ def calibration_sides(sampling: Mapping[str, Any]) -> tuple[int, int]:
         for block in (sampling["calibration"], sampling.get("time_average_calibration"))
     )
     return average if prefers_time_average(single, average) else single
+
+
+def _check_volume(facts: Mapping[str, Any], settings: Settings) -> None:
+    axes = facts["axes"]
+    if not {"kz", "ky", "kx"} <= set(axes):
+        return
+    for name in ("temporal_strength", "low_rank_strength"):
+        if axes.get("frame", 1) > 1 and getattr(settings, name) != 0:
+            _refuse(
+                f"/{name}",
+                f"received {getattr(settings, name)} for a volume with frames; accepted is 0: each frame is a volume "
+                f"of its own",
+            )
+    if facts["sampling"]["varies_along_readout"]:
+        _refuse(
+            "/volume",
+            "received planes, but the mask varies along kx, so that readouts cannot be transformed on their own; "
+            "choose a mask that is constant along kx",
+        )
+
+
+def _refuse(pointer: str, detail: str) -> NoReturn:
+    raise InvalidSettings([{"pointer": pointer, "detail": detail}])
 
 
 def needs_maps(settings: Settings, coils: int) -> bool:

@@ -7,6 +7,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass, field
+from itertools import product
 from typing import Any, Final
 
 import numpy as np
@@ -50,8 +51,9 @@ class Inspection:
         `varies_along_readout` (or along the columns of a phase-phase plane), `samples_per_position` (averages),
         `partial_fourier`, `resolution` in mm by axis (null where the field of view is unknown).
     objects : dict
-        Which of the optional objects the scan has; rows and columns of `/reference` and `/sensitivity`, those of the
-        reference without readout oversampling where the scan is solved without it.
+        Which of the optional objects the scan has; rows and columns of `/reference` and `/sensitivity` (of a volume
+        kz and ky of the one, z, y and x of the other), those of the reference without readout oversampling where the
+        scan is solved without it.
     findings : list of Finding
     """
 
@@ -80,6 +82,7 @@ class Inspector:
 
     def __init__(self, scan: Scan) -> None:
         self.scan = scan
+        self.source = scan  # read plane by plane
         self.sampling = SamplingFacts(scan.plane_shape, scan.averages)
         self.union = FrameUnion() if scan.axes.get("frame", 1) > 1 else None
         self.readouts = 0
@@ -98,31 +101,39 @@ class Inspector:
             For NaN or Inf, and for a plane without any sampled position.
         """
         mean = Mean()
-        for average, (kspace, mask) in enumerate(self.scan.each_average(index)):
+        for average, (kspace, mask) in enumerate(self.source.each_average(index)):
             self._see(index, average, kspace, mask)
             mean.add(kspace, mask)
         samples = mean.finish()
+        self._count(index, samples)
+        return samples
+
+    def _count(self, index: PlaneIndex, samples: Samples) -> None:
+        """Take in how often the positions of one plane were measured."""
         if not samples.mask.any():
-            what = (
-                "the mask is false everywhere"
-                if self.scan.mask_array is not None
-                else "/kspace holds only zeros"
-            )
             raise InvalidScan(
-                f"{what}{_where(self.scan, index)}; a plane needs at least one sampled position"
+                f"{self._nothing()}{self._where(index)}; a plane needs at least one sampled position"
             )
         self.sampling.see(samples.counts)
         if self.union is not None:
             self.union.see(index, samples.mask)
         per_line = samples.counts.max(axis=1) if self.scan.plane_axes[1] == "kx" else samples.counts
         self.readouts += int(per_line.sum())
-        return samples
+
+    def _nothing(self) -> str:
+        has_mask = self.scan.mask_array is not None
+        return "the mask is false everywhere" if has_mask else "/kspace holds only zeros"
+
+    def _where(self, index: PlaneIndex, average: int | None = None) -> str:
+        place = {**index._asdict(), **({} if average is None else {"average": average})}
+        parts = [f"{axis} {position}" for axis, position in place.items() if axis in self.scan.axes]
+        return f" in {', '.join(parts)}" if parts else ""
 
     def _see(
         self, index: PlaneIndex, average: int, kspace: NDArray[np.complex64], mask: NDArray[np.bool_]
     ) -> None:
         """Take in one average of one plane."""
-        where = _where(self.scan, index, average)
+        where = self._where(index, average)
         if not np.isfinite(kspace.view(np.float32)).all():
             raise InvalidScan(
                 f"/kspace contains NaN or Inf{where}; write finite numbers in single-precision range"
@@ -131,7 +142,7 @@ class Inspector:
         outside = int((holds & ~mask).sum())
         self.outside += outside
         self.outside_planes += outside > 0
-        empty = int((mask & ~_along_readout(holds, self.scan)).sum())
+        empty = int((mask & ~_along_readout(holds, self.source)).sum())
         self.empty_positions += empty
         if empty and self.empty_first is None:
             self.empty_first = where.strip(" ,") or "the plane"
@@ -156,7 +167,7 @@ class Inspector:
             )
         grid = image_grid(scan)
         encoded = scan.plane_shape[1]
-        solved = encoded if self.sampling.varies_along_columns else cropped_readout(scan)
+        solved = encoded if self.sampling.varies_along_columns or scan.is_volume else cropped_readout(scan)
         reference = _matrix(scan.reference_array, scan.plane_axes)
         if reference is not None:
             reference[1] = max(1, round(reference[1] * solved / encoded))
@@ -171,7 +182,7 @@ class Inspector:
             objects={
                 "noise": scan.noise_array is not None,
                 "mask": scan.mask_array is not None,
-                "sensitivity": _matrix(scan.sensitivity_array, scan.image_axes[-2:]),
+                "sensitivity": _matrix(scan.sensitivity_array, grid.axes),
                 "reference": reference,
             },
             image={
@@ -258,10 +269,11 @@ def _fields_mm(scan: Scan) -> dict[str, float] | None:
     return None if fields is None else dict(zip(("kx", "ky", "kz"), fields, strict=True))
 
 
-def _where(scan: Scan, index: PlaneIndex, average: int | None = None) -> str:
-    place = {**index._asdict(), **({} if average is None else {"average": average})}
-    parts = [f"{axis} {position}" for axis, position in place.items() if axis in scan.axes]
-    return f" in {', '.join(parts)}" if parts else ""
+def inspector_of(scan: Scan) -> Inspector:
+    """The inspector that fits a scan of planes or of volumes."""
+    from recon.volume_inspection import VolumeInspector  # a kind of Inspector itself
+
+    return VolumeInspector(scan) if scan.is_volume else Inspector(scan)
 
 
 def inspect(scan: Scan, progress: Callable[[float], None] | None = None) -> Inspection:
@@ -282,8 +294,8 @@ def inspect(scan: Scan, progress: Callable[[float], None] | None = None) -> Insp
     InvalidScan
         For content that cannot be reconstructed: NaN or Inf, all-false masks, nothing but zeros.
     """
-    inspector = Inspector(scan)
-    planes = scan.planes()
+    inspector = inspector_of(scan)
+    planes = inspector.source.planes()
     for done, index in enumerate(planes, start=1):
         inspector.read(index)
         if progress is not None:
@@ -302,8 +314,9 @@ def check_finite(scan: Scan) -> None:
     for name, array in others.items():
         if array is None:
             continue
-        for position in range(array.sizes.get("slice", 1)):
-            if not np.isfinite(array.take(slice=position).view(np.float32)).all():
+        sizes = array.sizes
+        for position, coil in product(range(sizes.get("slice", 1)), range(sizes.get("coil", 1))):
+            if not np.isfinite(array.take(slice=position, coil=coil).view(np.float32)).all():
                 raise InvalidScan(
                     f"{name} contains NaN or Inf; write finite numbers in single-precision range"
                 )

@@ -24,12 +24,14 @@ from recon.coils.maps import CoilMaps, MapFigures
 from recon.consistency import ResidualFigures
 from recon.errors import InvalidScan
 from recon.formats import ImageWriter, open_scan
+from recon.grid import image_grid
 from recon.parallel import in_order
 from recon.plane import PlaneResult, reconstruct_together
 from recon.preparation import Plane, Preparation, prepare
 from recon.report import SolverFigures, build_report
 from recon.scan import PlaneIndex, Scan
 from recon.settings import Settings
+from recon.volume_sink import PositionSink
 
 #: called as progress(stage, fraction of the whole job); raise from it to cancel between two iterations.
 Progress = Callable[[str, float], None]
@@ -102,19 +104,13 @@ def reconstruct(
     InvalidScan, InvalidSettings
         Naming what was received, what is accepted and what to do.
     """
-    arrays: dict[str, NDArray[np.complex64]] = {}
-
-    class Memory:
-        def write(self, name: str, index: PlaneIndex, plane: NDArray[np.complex64]) -> None:
-            outer = [scan.axes[axis] for axis in scan.outer_axes]
-            array = arrays.setdefault(name, np.zeros((*outer, *plane.shape), np.complex64))
-            array[tuple(index._asdict()[axis] for axis in scan.outer_axes)] = plane
-
+    memory = _Memory(scan)
     tell = _Teller(progress)
     with _one_thread_for_each_plane():
         preparation = prepare(scan, settings or Settings(), tell.preparing)
-        report = _run(preparation, Memory(), tell, provenance or {}, threads)
+        report = _run(preparation, _sink(preparation, memory), tell, provenance or {}, threads)
     tell("write", 1.0)
+    arrays = memory.arrays
     return Reconstruction(arrays["image"], arrays["residual_image"], scan.image_axes, report)
 
 
@@ -145,18 +141,52 @@ def reconstruct_file(
     tell = _Teller(progress)
     with _one_thread_for_each_plane(), open_scan(scan_path) as scan:
         preparation = prepare(scan, settings or Settings(), tell.preparing)
-        with ImageWriter(image_path, scan, preparation.grid) as writer:
-            report = _run(preparation, writer, tell, provenance or {}, threads)
+        with ImageWriter(image_path, scan, preparation.image_grid) as writer:
+            report = _run(preparation, _sink(preparation, writer), tell, provenance or {}, threads)
             tell("write", _PLANES_DONE)
             writer.finish(report, provenance or {})
     tell("write", 1.0)
     return report
 
 
+class _Memory:
+    """Keeps finished images as arrays."""
+
+    def __init__(self, scan: Scan) -> None:
+        self._outer = scan.outer_axes
+        self._shape = (*(scan.axes[axis] for axis in self._outer), *image_grid(scan).written)
+        self.arrays: dict[str, NDArray[np.complex64]] = {}
+
+    def _part(self, name: str, index: PlaneIndex) -> NDArray[np.complex64]:
+        array = self.arrays.setdefault(name, np.zeros(self._shape, np.complex64))
+        part: NDArray[np.complex64] = array[tuple(index._asdict()[axis] for axis in self._outer)]
+        return part
+
+    def write(self, name: str, index: PlaneIndex, plane: NDArray[np.complex64]) -> None:
+        self._part(name, index)[...] = plane
+
+    def write_positions(
+        self, name: str, index: PlaneIndex, positions: slice, part: NDArray[np.complex64]
+    ) -> None:
+        self._part(name, index)[..., positions] = part
+
+
+def _sink(preparation: Preparation, target: _Memory | ImageWriter) -> Sink:
+    """Where planes go: straight to the target, or through a collector of a volume's readout positions."""
+    if preparation.volume is None:
+        return target
+    return PositionSink(target, preparation.image_grid)
+
+
 def _run(
     preparation: Preparation, sink: Sink, tell: _Teller, provenance: Mapping[str, Any], threads: int
 ) -> dict[str, Any]:
-    residuals = ResidualFigures(preparation.shape, preparation.whitening, preparation.scan.axes)
+    residuals = ResidualFigures(
+        preparation.shape,
+        preparation.whitening,
+        preparation.scan.axes,
+        is_volume=preparation.volume is not None,
+    )
     solver = SolverFigures()
     groups = preparation.groups()
     shelf = _MapShelf(preparation, tell, threads + 1)

@@ -87,7 +87,7 @@ def _solve(
     if settings.method == "zero-filled":
         # a mean estimates its position whatever its noise: weights would act as a filter on the image
         encoding, _ = measurement(preparation, maps, [plane._replace(weights=None) for plane in planes])
-        virtual = preparation.compression.apply(planes[0].kspace)
+        virtual = preparation.compression_of(planes[0].position).apply(planes[0].kspace)
         return zero_filled(encoding, virtual, planes[0].mask), None
     if settings.method == "tikhonov":
         encoding, data = measurement(preparation, maps, planes)

@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
-from dataclasses import dataclass
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field
 from typing import Any, NamedTuple
 
 import numpy as np
@@ -21,6 +21,7 @@ from recon.operators.fourier import crop_readout
 from recon.scan import PlaneIndex, Scan, cropped_readout
 from recon.settings import Settings
 from recon.strengths import resolve_strengths
+from recon.volume_reading import Volume, read_volume
 
 Report = Callable[[str, float], None]
 
@@ -35,11 +36,14 @@ class Plane(NamedTuple):
     mask : bool (rows, columns)
     weights : float32 (rows, columns) or None
         sqrt(n / mean n) where positions were measured unequally often, zero where not sampled; None: one everywhere.
+    position : int
+        Its slice.
     """
 
     kspace: NDArray[Any]
     mask: NDArray[np.bool_]
     weights: NDArray[np.float32] | None = None
+    position: int = 0
 
     @property
     def weighted(self) -> NDArray[Any]:
@@ -53,6 +57,14 @@ class Preparation:
 
     Attributes
     ----------
+    scan : Scan
+        Read plane by plane; of a volume its readout positions, as slices.
+    compression : Compression
+        Virtual coils of the whole scan.
+    compressions : dict
+        Those of each readout position, where a volume is solved plane by plane; they share one phase reference.
+    volume : Volume or None
+        The volume that the planes are from.
     settings : Settings
         As resolved: no strength is `auto` any more, nor the map method where maps are made.
     shape : (rows, columns)
@@ -78,11 +90,23 @@ class Preparation:
     kappa: float
     calibration: dict[int, Calibration]
     mean_count: float = 1.0
+    compressions: Mapping[int, Compression] = field(default_factory=dict)
+    volume: Volume | None = None
+
+    @property
+    def image_grid(self) -> ImageGrid:
+        """The grid of an image plane, or of a volume."""
+        return self.grid if self.volume is None else self.volume.grid
+
+    def compression_of(self, position: int) -> Compression:
+        """The virtual coils of one slice."""
+        return self.compressions.get(position, self.compression)
 
     def make_maps(self, position: int) -> CoilMaps:
         """Coil maps of one slice."""
         assert self.map_method is not None
-        maker = MapMaker(self.scan, self.map_method, self.whitening, self.compression, self.shape)
+        compression = self.compression_of(position)
+        maker = MapMaker(self.scan, self.map_method, self.whitening, compression, self.shape)
         return maker.make(position, self.calibration[position])
 
     def load(self, index: PlaneIndex) -> Plane:
@@ -92,7 +116,7 @@ class Preparation:
         counts = samples.counts
         if self.shape[1] != counts.shape[1]:
             counts = np.broadcast_to(counts[:, :1], self.shape)
-        return Plane(kspace, counts > 0, relative_weights(counts, self.mean_count))
+        return Plane(kspace, counts > 0, relative_weights(counts, self.mean_count), index.slice)
 
     def groups(self) -> list[list[PlaneIndex]]:
         """Planes that are solved together: the frames of a slice and contrast if something ties them, else one each."""
@@ -109,20 +133,22 @@ class Preparation:
 
     def figures(self) -> dict[str, Any]:
         """The stages' own figures for the report."""
+        compressions, grid = [*self.compressions.values()] or [self.compression], self.image_grid
         return {
             "whitening": {"source": self.whitening.source, "samples": self.whitening.samples},
             "averages": {"mean_count": self.mean_count},
             "matrix": {
-                "axes": list(self.grid.axes),
-                "encoded": list(self.grid.encoded),
-                "solved": list(self.shape),
-                "kept": list(self.grid.kept),
-                "written": list(self.grid.written),
+                "axes": list(grid.axes),
+                "encoded": list(grid.encoded),
+                "solved": [*self.shape, *grid.kept[2:]],
+                "kept": list(grid.kept),
+                "written": list(grid.written),
             },
             "coil_compression": {
                 "coils": self.scan.coils,
-                "virtual_coils": self.compression.coils,
-                "kept_energy": self.compression.kept_energy,
+                "virtual_coils": max(one.coils for one in compressions),
+                "fewest_virtual_coils": min(one.coils for one in compressions),
+                "kept_energy": float(np.mean([one.kept_energy for one in compressions])),
             },
             "coil_maps": {"method": self.map_method or "none"},
             "noise_units": {"kappa": self.kappa, "known": self.whitening.has_noise_units},
@@ -146,9 +172,14 @@ def prepare(scan: Scan, settings: Settings, report: Report) -> Preparation:
     InvalidSettings
         For settings that do not fit the scan.
     """
+    volume = None
+    if scan.is_volume:
+        volume = read_volume(scan, settings, report)
+        scan = volume.planes
     method = _map_method(scan, settings)
     shape = _solved_shape(scan)
-    inspection, calibration, shape = _read(scan, shape, method, report)
+    known = None if volume is None else volume.inspection
+    inspection, calibration, shape = _read(scan, shape, method, report, known)
     mean_count = float(inspection.sampling["samples_per_position"]["mean"])
     if mean_count != 1:
         unit = float(1 / np.sqrt(mean_count))
@@ -156,19 +187,24 @@ def prepare(scan: Scan, settings: Settings, report: Report) -> Preparation:
     check_job(inspection.as_dict(), settings)
     check_finite(scan)
     report("whiten", 0.0)
-    whitening = estimate_whitening(scan, mean_count)
+    whitening = estimate_whitening(scan, mean_count, scan if volume is None else volume.slabs)
     resolved = resolve_strengths(settings, has_noise_units=whitening.has_noise_units)
     report("crop", 0.0)
     report("compress", 0.0)
-    gram = np.zeros((scan.coils, scan.coils), np.complex128)
-    blocks = [block for of_slice in calibration.values() for block in of_slice.blocks]
-    for block in blocks:
-        samples = whitening.apply(block).reshape(scan.coils, -1).astype(np.complex128)
-        gram += samples @ samples.conj().T / samples.shape[1]
-    gram /= len(blocks)
+    blocks = {position: each.blocks for position, each in calibration.items()}
+    grams = {position: _gram(of_slice, whitening) for position, of_slice in blocks.items()}
     # one coil has nothing to compress, and images coil by coil use all of them
     rule = None if method in (None, "single-coil") or scan.coils == 1 else resolved.coil_compression
-    compression = Compression(gram, rule, has_noise_units=whitening.has_noise_units)
+    has_units = whitening.has_noise_units
+    shares = np.array([len(blocks[position]) for position in grams], np.float64)
+    mean_gram = np.average(np.stack([*grams.values()]), axis=0, weights=shares)
+    compression = Compression(mean_gram, rule, has_noise_units=has_units)
+    compressions = {}
+    if volume is not None and rule is not None:
+        compressions = {
+            position: Compression(gram, rule, has_noise_units=has_units, dominant=compression.dominant)
+            for position, gram in grams.items()
+        }
     if method is not None:
         resolved = resolved.model_copy(
             update={"coil_maps": settings.coil_maps if method == "single-coil" else method}
@@ -182,10 +218,34 @@ def prepare(scan: Scan, settings: Settings, report: Report) -> Preparation:
         map_method=method,
         shape=shape,
         grid=image_grid(scan),
-        kappa=float(np.sqrt(squared_gain(blocks, whitening, compression))),
+        kappa=float(np.sqrt(squared_gain(_pairs(blocks, compression, compressions), whitening))),
         calibration=calibration,
         mean_count=mean_count,
+        compressions=compressions,
+        volume=volume,
     )
+
+
+def _gram(blocks: list[NDArray[Any]], whitening: Whitening) -> NDArray[Any]:
+    """Mean of y y^H over the whitened samples of a slice's blocks."""
+    grams = []
+    for block in blocks:
+        samples = whitening.apply(block).reshape(len(block), -1).astype(np.complex128)
+        grams.append(samples @ samples.conj().T / samples.shape[1])
+    return np.asarray(np.mean(grams, axis=0))
+
+
+def _pairs(
+    blocks: Mapping[int, list[NDArray[Any]]],
+    compression: Compression,
+    compressions: Mapping[int, Compression],
+) -> list[tuple[NDArray[Any], Compression]]:
+    """Every block with the virtual coils of its slice."""
+    return [
+        (block, compressions.get(position, compression))
+        for position, of_slice in blocks.items()
+        for block in of_slice
+    ]
 
 
 def _map_method(scan: Scan, settings: Settings) -> MapMethod | None:
@@ -218,18 +278,20 @@ def _solved_shape(scan: Scan) -> tuple[int, int]:
 
 
 def _read(
-    scan: Scan, shape: tuple[int, int], method: MapMethod | None, report: Report
+    scan: Scan, shape: tuple[int, int], method: MapMethod | None, report: Report, known: Inspection | None
 ) -> tuple[Inspection, dict[int, Calibration], tuple[int, int]]:
-    """One pass over all data: facts, what each slice is calibrated from, and the shape of a plane as it is solved."""
-    inspector = Inspector(scan)
+    """One pass over all data: facts unless known, what slices are calibrated from, the shape of a plane as solved."""
+    inspector = Inspector(scan) if known is None else None
     gatherer = Gatherer(scan, shape, needs_full=method in ("eigenvector", "adaptive"))
     planes = scan.planes()
     for done, index in enumerate(planes):
         report("read", done / len(planes))
-        samples = inspector.read(index)
+        samples = scan.samples(index) if inspector is None else inspector.read(index)
         report("inspect", done / len(planes))
         if shape[1] != scan.plane_shape[1] and (samples.counts != samples.counts[:, :1]).any():
             # a partial echo that only the data show: its readouts cannot be transformed, and so not cropped, either
-            return _read(scan, scan.plane_shape, method, report)
+            return _read(scan, scan.plane_shape, method, report, known)
         gatherer.see(index, samples)
-    return inspector.finish(), gatherer.finish(), shape
+    inspection = known if inspector is None else inspector.finish()
+    assert inspection is not None
+    return inspection, gatherer.finish(), shape

@@ -33,7 +33,7 @@ def measurement(
         In the range of `encoding`.
     """
     scaled = maps.virtual / np.float32(preparation.kappa)
-    virtual = [preparation.compression.apply(plane.kspace) for plane in planes]
+    virtual = [preparation.compression_of(plane.position).apply(plane.kspace) for plane in planes]
     if len(planes) == 1:
         encoding = Encoding(scaled, planes[0].mask, weights=planes[0].weights)
         return encoding, encoding.to_range(virtual[0])

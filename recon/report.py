@@ -18,6 +18,8 @@ from recon.solver import Solution
 SCHEMA_VERSION: Final = 1
 #: values of the objective kept for each plane: enough to draw the curve.
 HISTORY_LENGTH: Final = 32
+#: readout positions of a volume whose curve is kept, at most.
+CURVES: Final = 16
 
 
 class SolverFigures:
@@ -49,12 +51,24 @@ class SolverFigures:
         settings = preparation.settings
         return {
             "method": settings.method,
-            "planes": self.planes,
+            "planes": self.planes if preparation.volume is None else self._positions(),
             "converged_planes": sum(plane["stop_reason"] != "iteration-limit" for plane in self.planes),
             "iterations": sum(plane["iterations"] for plane in self.planes),
             "worst_optimality": max((plane["optimality"] for plane in self.planes), default=None),
             "tolerance": settings.tolerance,
         }
+
+    def _positions(self) -> list[dict[str, Any]]:
+        """Planes of a volume by their place, the objective's curve of a few: a report stays small."""
+        every = max(1, -(-len(self.planes) // CURVES))
+        positions = []
+        for number, plane in enumerate(self.planes):
+            kept = {"frame": plane["frame"], "contrast": plane["contrast"], "x": plane["slice"], **plane}
+            del kept["slice"]
+            if number % every:
+                del kept["objective"], kept["objective_every"]
+            positions.append(kept)
+        return positions
 
     def findings(self, preparation: Preparation) -> list[Finding]:
         """What the solve has to say."""
@@ -113,7 +127,7 @@ def build_report(
     findings = [
         *inspection.findings,
         *noise_findings(preparation.whitening, scan.noise_attributes, scan.attributes),
-        *map_findings(map_figures),
+        *map_findings(map_figures, "slice" if preparation.volume is None else "x"),
         *solver.findings(preparation),
     ]
     figures = residuals.as_dict()

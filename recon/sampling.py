@@ -31,7 +31,7 @@ class SamplingFacts:
     def __init__(self, shape: tuple[int, int], averages: int = 1) -> None:
         self.shape = shape
         self.averages = averages
-        self.planes = 0
+        self.positions = 0
         self.sampled = 0
         self.samples = 0
         self.fewest, self.most = 0, 0
@@ -51,32 +51,41 @@ class SamplingFacts:
 
     def see(self, counts: NDArray[Any]) -> None:
         """Take in one plane: how often each position was measured (or a mask)."""
+        self.count(counts)
+        self.judge(np.asarray(counts > 0))
+
+    def count(self, counts: NDArray[Any]) -> None:
+        """Add up positions and samples of any part of k-space."""
         mask = np.asarray(counts > 0)
-        self.planes += 1
+        self.positions += mask.size
         self.sampled += int(mask.sum())
         self.samples += int(counts.sum())
         if mask.any():
             fewest = int(counts[mask].min())
             self.fewest = min(self.fewest or fewest, fewest)
             self.most = max(self.most, int(counts.max()))
+
+    def judge(self, mask: NDArray[np.bool_], block: tuple[int, ...] | None = None) -> None:
+        """Take in the pattern of one plane, or of a volume with the sides of its calibration block."""
         key = np.packbits(mask).tobytes()
         if key in self._seen:
             return
         self._seen.add(key)
         for axis, covered in enumerate(self.covered):
             covered |= mask.any(axis=tuple(other for other in range(mask.ndim) if other != axis))
-        rows, columns = central_block(mask)
+        block = central_block(mask) if block is None else block
+        rows, columns = block[:2]
         if rows * columns < self.calibration[0] * self.calibration[1] or len(self._seen) == 1:
             self.calibration = (rows, columns)
         self.peak_side_lobe = max(self.peak_side_lobe, peak_side_lobe(mask))
-        self._nominal.append(_acceleration_outside(mask, rows, columns))
-        if not (mask == mask[:, :1]).all():
+        self._nominal.append(_acceleration_outside(mask, block))
+        if not (mask == mask[..., :1]).all():
             self.varies_along_columns = True
-            self.is_partial_echo = self.is_partial_echo and _is_partial_echo(mask)
+            self.is_partial_echo = self.is_partial_echo and is_partial_echo(mask)
 
     def as_dict(self) -> dict[str, Any]:
         """Plain JSON form."""
-        total = self.planes * self.shape[0] * self.shape[1]
+        total = self.positions
         return {
             "sampled_fraction": self.sampled / total,
             "net_acceleration": total * self.averages / self.samples,
@@ -125,28 +134,29 @@ class FrameUnion:
 
 def peak_side_lobe(mask: NDArray[np.bool_]) -> float:
     """Peak side-lobe of the point-spread function: max |F^-1 P|(r != 0) / |F^-1 P|(0) (Lustig et al. 2007)."""
-    spread = np.abs(scipy.fft.ifft2(mask.astype(np.float64)))
-    peak = float(spread[0, 0])
-    spread[0, 0] = 0
+    # a real array's spectrum is symmetric, so that half of it shows every magnitude; single precision keeps it small
+    dtype = np.float64 if mask.ndim == 2 else np.float32
+    spread = np.abs(scipy.fft.rfftn(mask.astype(dtype)))
+    peak = float(spread.flat[0])
+    spread.flat[0] = 0
     return float(spread.max()) / peak if peak > 0 else 0.0
 
 
-def _acceleration_outside(mask: NDArray[np.bool_], rows: int, columns: int) -> float:
+def _acceleration_outside(mask: NDArray[np.bool_], block: tuple[int, ...]) -> float:
     """Positions over samples, leaving the calibration block out (1 where nothing is left)."""
     outside = np.ones(mask.shape, np.bool_)
-    if rows and columns:
-        first = tuple(n // 2 - k // 2 for n, k in zip(mask.shape, (rows, columns), strict=True))
-        outside[first[0] : first[0] + rows, first[1] : first[1] + columns] = False
+    first = (n // 2 - k // 2 for n, k in zip(mask.shape, block, strict=True))
+    outside[tuple(slice(start, start + k) for start, k in zip(first, block, strict=True))] = False
     sampled = int((mask & outside).sum())
     return float(outside.sum()) / sampled if sampled else 1.0
 
 
-def _is_partial_echo(mask: NDArray[np.bool_]) -> bool:
+def is_partial_echo(mask: NDArray[np.bool_]) -> bool:
     """Whether every sampled line has the same single run of columns, which contains DC."""
-    lines = mask[mask.any(axis=1)]
+    lines = mask[mask.any(axis=-1)]
     run = lines[0]
     edges = int(np.count_nonzero(np.diff(np.concatenate(([0], run.astype(np.int8), [0])))))
-    return bool((lines == run).all() and edges == 2 and run[mask.shape[1] // 2])
+    return bool((lines == run).all() and edges == 2 and run[mask.shape[-1] // 2])
 
 
 def readout_finding(facts: SamplingFacts, plane_axes: tuple[str, str]) -> list[Finding]:

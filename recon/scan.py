@@ -38,7 +38,8 @@ class Scan:
     Attributes
     ----------
     kspace_array : LabelledArray
-        Complex, axes among `frame slice contrast average coil` and either `ky kx` or `kz ky`.
+        Complex, axes among `frame slice contrast average coil` and either `ky kx` or `kz ky`; a volume has
+        `kz ky kx` and no `slice`.
     mask_array : LabelledArray or None
         Bool, a subset of the k-space axes without `coil`; None: inferred from zeros.
     noise_array : LabelledArray or None
@@ -92,8 +93,13 @@ class Scan:
         return self.kspace_array.sizes
 
     @property
+    def is_volume(self) -> bool:
+        """Whether all three of `kz ky kx` are there."""
+        return {"kz", "ky", "kx"} <= set(self.axes)
+
+    @property
     def plane_axes(self) -> tuple[str, str]:
-        """The two axes of one plane: (`ky`, `kx`) or (`kz`, `ky`)."""
+        """The two axes of one plane: (`ky`, `kx`) or (`kz`, `ky`); of a volume its phase encodes, `kz` and `ky`."""
         return ("kz", "ky") if "kz" in self.axes else ("ky", "kx")
 
     @property
@@ -120,7 +126,8 @@ class Scan:
     @property
     def image_axes(self) -> tuple[str, ...]:
         """Axes of the reconstructed image."""
-        return (*self.outer_axes, *(image_axis(axis) for axis in self.plane_axes))
+        inner = ("kz", "ky", "kx") if self.is_volume else self.plane_axes
+        return (*self.outer_axes, *(image_axis(axis) for axis in inner))
 
     def planes(self) -> list[PlaneIndex]:
         """Every plane, slice by slice, so that the planes which share maps follow each other."""
@@ -217,7 +224,8 @@ def validate(scan: Scan) -> None:
     for name in ("kspace", "noise", "reference", "sensitivity"):
         _check_numbers(f"/{name}", getattr(scan, f"{name}_array"))
     sizes = scan.axes
-    plane, image = scan.plane_axes, tuple(image_axis(axis) for axis in scan.plane_axes)
+    plane = ("kz", "ky", "kx") if scan.is_volume else scan.plane_axes
+    image = tuple(image_axis(axis) for axis in plane)
     fixed: dict[str, int] = {axis: sizes[axis] for axis in sizes if axis in ("slice", "coil")}
     if scan.mask_array is not None:
         accepted = [axis for axis in sizes if axis != "coil"]
@@ -248,10 +256,15 @@ def _check_numbers(name: str, array: LabelledArray | None) -> None:
 def _check_kspace_axes(array: LabelledArray) -> None:
     axes = [label for label in array.labels if label != COMPLEX_AXIS]
     phases = {"kz", "ky", "kx"} & set(axes)
-    if phases not in ({"ky", "kx"}, {"kz", "ky"}):
+    if phases not in ({"ky", "kx"}, {"kz", "ky"}, {"kz", "ky", "kx"}):
         raise InvalidScan(
             f"/kspace has the axes {', '.join(axes)}; a plane needs exactly ky and kx, or kz and ky (one readout "
-            f"position): label the axes so, out of {', '.join(KSPACE_AXES)}"
+            f"position), a volume kz, ky and kx: label the axes so, out of {', '.join(KSPACE_AXES)}"
+        )
+    if len(phases) == 3 and "slice" in axes:
+        raise InvalidScan(
+            f"/kspace has the axes {', '.join(axes)}; a volume (kz, ky and kx) has no slice axis: write one scan for "
+            f"each slab"
         )
     for label, size in array.sizes.items():
         if size == 0:
@@ -312,25 +325,28 @@ def _check_calibration(
 
 def _check_map_size(scan: Scan, array: LabelledArray, image: tuple[str, ...]) -> None:
     received = tuple(array.sizes[axis] for axis in image)
-    cropped = scan.plane_shape[0], cropped_readout(scan)
-    if received not in (scan.plane_shape, cropped):
+    encoded = tuple(scan.axes["k" + axis] for axis in image)
+    cropped = (*encoded[:-1], cropped_readout(scan))
+    if received not in (encoded, cropped):
         raise InvalidScan(
-            f"/sensitivity has the matrix {received}; accepted is that of k-space, {scan.plane_shape}"
-            + (f", or {cropped} with readout oversampling removed" if cropped != scan.plane_shape else "")
+            f"/sensitivity has the matrix {received}; accepted is that of k-space, {encoded}"
+            + (f", or {cropped} with readout oversampling removed" if cropped != encoded else "")
         )
 
 
 def cropped_readout(scan: Scan) -> int:
-    """Columns of a plane once readout oversampling is removed (unchanged for phase-phase planes).
+    """Columns of a plane, or readout positions of a volume, once readout oversampling is removed.
+
+    Phase-phase planes keep their columns.
 
     Raises
     ------
     InvalidScan
         When the oversampling does not leave a whole number of columns.
     """
-    columns = scan.plane_shape[1]
+    columns = scan.axes.get("kx", scan.plane_shape[1])
     oversampling = float(scan.attributes.get("readout_oversampling", 1.0))
-    if scan.plane_axes[1] != "kx" or oversampling == 1.0:
+    if "kx" not in scan.axes or oversampling == 1.0:
         return columns
     exact = columns / oversampling
     if abs(exact - round(exact)) > 1e-6 or round(exact) < 1:

@@ -110,6 +110,8 @@ class Settings(BaseModel):
     combination : {"sensitivity", "root-sum-of-squares"}
         Of iterative methods the latter is the magnitude sqrt(sum_c |S_c m|^2), which is |m|; of `zero-filled`, the coil
         images' own, which needs no maps.
+    volume : {"planes"}
+        Of a scan with `kz ky kx`: every readout position alone (its mask must not vary along `kx`).
     tolerance : float
         The solver stops when its relative optimality residual falls below this; single precision ends near 1e-6.
     max_iterations : int
@@ -132,6 +134,7 @@ class Settings(BaseModel):
         Literal["auto"] | KeepEnergy | KeepCoils | None, BeforeValidator(_compression)
     ] = "auto"
     combination: Literal["sensitivity", "root-sum-of-squares"] = "sensitivity"
+    volume: Literal["planes"] = "planes"
     tolerance: float = Field(default=5e-5, ge=1e-6, lt=1, strict=True, allow_inf_nan=False)
     max_iterations: int = Field(default=300, ge=1, le=100_000, strict=True)
 

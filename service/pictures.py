@@ -89,19 +89,21 @@ def picture_png(
 def result_png(path: Path | str, *, title: str) -> bytes:
     """The magnitude image of a result file (`image.h5`): one plane as it is, several as a mosaic.
 
-    Only the planes that are shown are read. Axes other than the last two count as planes.
+    Only the planes that are shown are read: of a volume the middle one. Axes other than the last two count as planes.
     """
     with h5py.File(path, "r") as file:
         image = file["image"]
         axes = [str(dimension.label) for dimension in image.dims]
-        outer = image.shape[:-2]
+        middle = (image.shape[-3] // 2,) if axes[-3:] == ["z", "y", "x"] else ()
+        outer = image.shape[: image.ndim - 2 - len(middle)]
         fields = image.attrs.get("field_of_view_mm")
         pixel_size = None if fields is None else _pixel_size(axes[-2:], image.shape[-2:], fields)
         if not outer:
-            return picture_png(np.abs(image[()]), title=title, pixel_size_mm=pixel_size)
+            where = f", z {middle[0]}" if middle else ""
+            return picture_png(np.abs(image[middle]), title=title + where, pixel_size_mm=pixel_size)
         every = list(np.ndindex(*outer))
         chosen = [every[position] for position in evenly_chosen(len(every), MOSAIC_PLANES)]
-        stack = np.stack([np.abs(image[index]) for index in chosen])
+        stack = np.stack([np.abs(image[(*index, *middle)]) for index in chosen])
         labels = [
             "  ".join(f"{axis} {i}" for axis, i, n in zip(axes, index, outer, strict=False) if n > 1)
             for index in chosen
@@ -111,15 +113,21 @@ def result_png(path: Path | str, *, title: str) -> bytes:
 
 def quick_look(scan: Scan) -> bytes:
     """What a scan holds at a glance: its middle plane, zero-filled, root-sum-of-squares over the coils."""
-    planes = scan.planes()
-    index = planes[len(planes) // 2]
-    sampled = scan.samples(index).kspace
+    if scan.is_volume:
+        from recon.volume import middle_plane
+
+        sampled, index = middle_plane(scan)
+        axes = ["y", "x"]
+    else:
+        planes = scan.planes()
+        index = planes[len(planes) // 2]
+        sampled = scan.samples(index).kspace
+        axes = [axis.removeprefix("k") for axis in scan.plane_axes]
     image = np.fft.fftshift(
         np.fft.ifft2(np.fft.ifftshift(sampled, axes=(-2, -1)), norm="ortho"), axes=(-2, -1)
     )
     magnitude = np.sqrt(np.sum(np.abs(image.astype(np.complex64)) ** 2, axis=0))
     fields = scan.attributes.get("field_of_view_mm")
-    axes = [axis.removeprefix("k") for axis in scan.plane_axes]
     pixel_size = None if fields is None else _pixel_size(axes, magnitude.shape, fields)
     where = ", ".join(f"{axis} {getattr(index, axis)}" for axis in scan.outer_axes if scan.axes[axis] > 1)
     return picture_png(

@@ -31,13 +31,17 @@ class Compression:
         None keeps the channels as they are.
     has_noise_units : bool
         Whether the noise variance is one.
+    dominant : complex (coil), optional
+        Phase reference in all coils; the dominant singular vector of these calibration data where left out.
 
     Attributes
     ----------
     matrix : complex128 (virtual coil, coil)
         Orthonormal rows; the identity without compression.
+    dominant : complex128 (coil)
+        The phase reference of all maps.
     reference : complex128 (virtual coil)
-        Dominant singular vector of the calibration data in virtual coils: the phase reference of all maps.
+        The same in virtual coils.
     kept_energy : float
         Fraction of the calibration energy in the virtual coils kept.
     """
@@ -48,6 +52,7 @@ class Compression:
         rule: Literal["auto"] | KeepEnergy | KeepCoils | None,
         *,
         has_noise_units: bool,
+        dominant: NDArray[Any] | None = None,
     ) -> None:
         values, vectors = np.linalg.eigh((gram + gram.conj().T) / 2)
         values, vectors = np.maximum(values[::-1], 0), vectors[:, ::-1]
@@ -59,9 +64,11 @@ class Compression:
         else:
             self.matrix = vectors[:, :count].conj().T
             self.kept_energy = float(values[:count].sum()) / total
-        dominant = vectors[:, 0]
-        # eigenvectors carry an arbitrary phase; fix it so that the image does not depend on the library's choice
-        dominant = dominant * np.exp(-1j * np.angle(dominant[np.argmax(np.abs(dominant))]))
+        if dominant is None:
+            dominant = vectors[:, 0]
+            # eigenvectors carry an arbitrary phase; fix it so that the image does not depend on the library's choice
+            dominant = dominant * np.exp(-1j * np.angle(dominant[np.argmax(np.abs(dominant))]))
+        self.dominant = dominant
         self.reference = self.matrix @ dominant
 
     @property

@@ -58,26 +58,29 @@ def noise_findings(
     return found
 
 
-def map_findings(figures: Mapping[int, MapFigures]) -> list[Finding]:
+def map_findings(figures: Mapping[int, MapFigures], axis: str = "slice") -> list[Finding]:
     """Findings about maps that leave out part of the object.
 
     Parameters
     ----------
     figures : mapping
         How the maps were made, by slice.
+    axis : str
+        What a slice is called: `x` for the readout positions of a volume.
     """
     shares = {position: each.object_share for position, each in figures.items()}
     poor = {position: share for position, share in shares.items() if share < 1 - LARGEST_SHARE_LEFT_OUT}
     if not poor:
         return []
     worst = min(poor, key=lambda position: poor[position])
+    planes = "slice(s)" if axis == "slice" else f"{axis} position(s)"
     return [
         Finding(
             "maps-incomplete",
             "error" if poor[worst] == 0 else "warning",
-            f"The coil maps of {len(poor)} slice(s) leave out part of the object ({1 - poor[worst]:.0%} of slice "
+            f"The coil maps of {len(poor)} {planes} leave out part of the object ({1 - poor[worst]:.0%} of {axis} "
             f"{worst}), and the image is zero there: sample more of the centre, try adaptive maps, or supply some.",
-            f"slice {worst}",
+            f"{axis} {worst}",
             {"slices": len(poor), "smallest_share": poor[worst]},
         )
     ]

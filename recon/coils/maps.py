@@ -192,7 +192,7 @@ def _inverse_size(maps: NDArray[Any]) -> NDArray[np.float32]:
     return np.divide(1.0, size, out=np.zeros_like(size), where=size > 0).astype(np.float32)
 
 
-def squared_gain(blocks: list[NDArray[Any]], whitening: Whitening, compression: Compression) -> float:
+def squared_gain(pairs: list[tuple[NDArray[Any], Compression]], whitening: Whitening) -> float:
     """Mean over the object of S^H Psi^-1 S with sum |S|^2 = 1 in physical coils, 1 where there is no object.
 
     The coil images of a calibration block point along S at each pixel, which is all that the ratio needs; so the mean
@@ -200,11 +200,11 @@ def squared_gain(blocks: list[NDArray[Any]], whitening: Whitening, compression: 
 
     Parameters
     ----------
-    blocks : list of complex (coil, rows, columns)
-        Raw calibration k-space of every slice.
+    pairs : list of (complex (coil, rows, columns), Compression)
+        Raw calibration k-space of every slice, and that slice's virtual coils.
     """
     powers = []
-    for block in blocks:
+    for block, compression in pairs:
         images = low_resolution_images(whitening.apply(block))
         virtual = np.sum(np.abs(compression.apply(images)) ** 2, axis=0, dtype=np.float64)
         physical = np.sum(np.abs(mix(whitening.unwhitener, images)) ** 2, axis=0, dtype=np.float64)

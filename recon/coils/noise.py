@@ -127,7 +127,7 @@ def whitening_from(covariance: NDArray[Any], source: str, samples: int) -> White
     )
 
 
-def estimate_whitening(scan: Scan, mean_count: float = 1.0) -> Whitening:
+def estimate_whitening(scan: Scan, mean_count: float = 1.0, periphery: Scan | None = None) -> Whitening:
     """Whitening from `/noise`, or from the periphery of k-space where there is none.
 
     Parameters
@@ -135,6 +135,8 @@ def estimate_whitening(scan: Scan, mean_count: float = 1.0) -> Whitening:
     scan : Scan
     mean_count : float
         Samples behind a sampled position, in the mean: the noise of their mean has Psi over that as its covariance.
+    periphery : Scan, optional
+        Where to look for the periphery, if not in the scan itself.
 
     Raises
     ------
@@ -152,7 +154,7 @@ def estimate_whitening(scan: Scan, mean_count: float = 1.0) -> Whitening:
         )
         covariance = sample_covariance(noise) * (scale / mean_count)
         return whitening_from(covariance, "noise-scan", noise.shape[1])
-    covariance, samples, largest = periphery_covariance(scan)
+    covariance, samples, largest = periphery_covariance(periphery or scan)
     if largest == 0.0 or np.sqrt(np.trace(covariance).real / scan.coils) <= ROUNDING * largest:
         identity = np.eye(scan.coils, dtype=np.complex128)
         unit = max(_largest_zero_filled(scan, index) for index in scan.planes()) or 1.0

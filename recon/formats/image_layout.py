@@ -21,6 +21,8 @@ from recon.scan import PlaneIndex, Scan
 
 LAYOUT: Final = "fallow-image"
 LAYOUT_VERSION: Final = 1
+#: side of the chunks that volumes are stored in.
+VOLUME_CHUNK: Final = 16
 _GEOMETRY: Final = (
     "field_of_view_mm",
     "slice_position_mm",
@@ -81,7 +83,11 @@ class ImageWriter:
         self._file["image"].attrs.update(geometry(scan, grid))
 
     def _create(self, name: str, shape: Sequence[int], axes: Sequence[str]) -> None:
-        written = self._file.create_dataset(name, shape, dtype=np.complex64)
+        # a volume comes readout position by position: chunks of a few keep each write to whole chunks
+        chunks = None
+        if axes[-3:] == ("z", "y", "x"):
+            chunks = (*(1,) * (len(shape) - 3), *(min(n, VOLUME_CHUNK) for n in shape[-3:]))
+        written = self._file.create_dataset(name, shape, dtype=np.complex64, chunks=chunks)
         for position, label in enumerate(axes):
             written.dims[position].label = label
 
@@ -89,6 +95,13 @@ class ImageWriter:
         """Store one plane of `image` or `residual_image`."""
         where = index._asdict()
         self._file[name][tuple(where[axis] for axis in self._outer)] = plane
+
+    def write_positions(
+        self, name: str, index: PlaneIndex, positions: slice, part: NDArray[np.complex64]
+    ) -> None:
+        """Store some readout positions of a volume, (z, y, positions)."""
+        where = index._asdict()
+        self._file[name][(*(where[axis] for axis in self._outer), ..., positions)] = part
 
     def finish(self, report: Mapping[str, Any], provenance: Mapping[str, Any]) -> None:
         """Add the report and close the file; without this call it is not a valid image file."""

@@ -1,0 +1,62 @@
+"""Reading a volume: what is in it, and its planes packed in memory."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+from recon.feasibility import check_job
+from recon.grid import ImageGrid, image_grid
+from recon.inspection import Inspection, check_finite
+from recon.scan import Scan
+from recon.settings import Settings
+from recon.volume import PlaneScan, Slabs, plane_scan, read_lines
+from recon.volume_inspection import VolumeInspector
+
+
+@dataclass(frozen=True)
+class Volume:
+    """A volume that has been read.
+
+    Attributes
+    ----------
+    scan : Scan
+        As it was given: axes, geometry, findings.
+    slabs : Slabs
+        Its k-space, one `kz` at a time.
+    planes : PlaneScan
+        Its readout positions, in memory.
+    inspection : Inspection
+    grid : ImageGrid
+        Of the volume's image.
+    """
+
+    scan: Scan
+    slabs: Slabs
+    planes: PlaneScan
+    inspection: Inspection
+    grid: ImageGrid
+
+
+def read_volume(scan: Scan, settings: Settings, report: Callable[[str, float], None]) -> Volume:
+    """Inspect a volume, then read its sampled lines.
+
+    Raises
+    ------
+    InvalidScan
+        For content that cannot be reconstructed.
+    InvalidSettings
+        For settings that do not fit the scan.
+    """
+    inspector = VolumeInspector(scan)
+    indices = inspector.slabs.planes()
+    for done, index in enumerate(indices):
+        report("read", done / len(indices) / 2)
+        inspector.read(index)
+        report("inspect", done / len(indices) / 2)
+    inspection = inspector.finish()
+    check_job(inspection.as_dict(), settings)
+    check_finite(scan)
+    counts = {key: pattern.lines for key, pattern in inspector.patterns.items()}
+    lines = read_lines(inspector.slabs, counts, lambda fraction: report("read", (1 + fraction) / 2))
+    return Volume(scan, inspector.slabs, plane_scan(scan, lines), inspection, image_grid(scan))
