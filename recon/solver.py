@@ -9,9 +9,13 @@ frame; total variation along the frames and the nuclear norm of the matrix (fram
 u~ is u with the margin that brings its size to one on which W is orthogonal; the margin is free (it costs nothing in
 the data term), so nothing is assumed about what lies beyond the border. Sizes that fit have no margin.
 
-Method: FISTA (Beck & Teboulle 2009) with gradient restart (O'Donoghue & Candes 2015). The proximal map of the two
-penalties together has no closed form: for a dual field p of the TV term the wavelet part is exact, so a few
-projected-gradient steps on p, warm-started from the previous iteration, are enough (Beck & Teboulle 2009, TV).
+Method: proximal gradient with momentum. The momentum is the whole last step until it points uphill, and then starts
+anew (greedy FISTA of Liang, Luo & Schoenlieb 2022, with the step 1/L; restart by O'Donoghue & Candes 2015): it needs
+20 to 35 % fewer iterations here than the growing momentum of FISTA (Beck & Teboulle 2009). An
+objective above that of the empty image starts it anew as well, so that a plain step, which cannot fail, follows. The
+proximal map of the two penalties together has no closed form: for a dual field p of the TV term the wavelet part is
+exact, so one or a few projected-gradient steps on p, warm-started from the previous iteration, are enough (Beck &
+Teboulle 2009, TV).
 All gradients are of the quadratic form, so the gradient at the extrapolated point is the same extrapolation of two
 known gradients: one normal operator for each iteration, and none for the optimality residual.
 """
@@ -31,11 +35,13 @@ from recon.operators.encoding import Encoding
 from recon.operators.wavelet import Wavelet
 from recon.penalties import nuclear_norm, project_spectral
 
-#: dual steps for each proximal map to begin with; two were the cheapest on simulated scans of two heads.
-DUAL_STEPS: Final = 2
+#: dual steps for each proximal map to begin with: on simulated scans of two heads, fifteen saved no iteration.
+DUAL_STEPS: Final = 1
 #: one step more whenever the optimality has not fallen by a fifth in this many iterations; and no more than so many.
 PATIENCE: Final = 10
 MOST_DUAL_STEPS: Final = 4
+#: share of the last step that is added to the next; 1 until the restart criterion stops it.
+MOMENTUM: Final = 1.0
 #: step of the dual gradient as a fraction of 1 / ||K||^2, K being all operators inside the dual terms; 2 is its limit.
 DUAL_STEP: Final = 1.9
 
@@ -141,7 +147,7 @@ def solve(
 
 
 class _Iteration:
-    """State of the iteration and its arithmetic. x, p, g, t as in the papers named above.
+    """State of the iteration and its arithmetic. x, p, g as in the papers named above.
 
     Arrays are padded images of three axes (a plane has one slab); the compiled loops see them as real numbers.
     """
@@ -172,7 +178,6 @@ class _Iteration:
             self.q = np.zeros(self.shape, self.b.dtype) if known is None else known.copy()
         self.hx = self._normal(self.x)
         self.x_before, self.hx_before = self.x, self.hx
-        self.t = 1.0
         self.dual_steps = DUAL_STEPS
         self.best, self.since_best = np.inf, 0
         self.iterations = 0
@@ -197,8 +202,7 @@ class _Iteration:
 
     def step(self) -> None:
         """One accelerated proximal-gradient step with restart, and the optimality residual at its end."""
-        t_next = (1 + np.sqrt(1 + 4 * self.t**2)) / 2
-        beta, step = self.real((self.t - 1) / t_next), self.real(1 / self.lipschitz)
+        beta, step = self.real(MOMENTUM), self.real(1 / self.lipschitz)
         state = (_flat(self.x), _flat(self.x_before), _flat(self.hx), _flat(self.hx_before), _flat(self.b))
         v = np.empty_like(self.b)
         kernels.extrapolated_step(*state, beta, step, _flat(v))
@@ -216,8 +220,6 @@ class _Iteration:
             self.lipschitz,
         )
         stationarity, quadratic, linear, restart = sums
-        if restart > 0:
-            t_next = 1.0
         objective = 0.5 * (quadratic + self.data_energy) - linear + penalty
         self.objective.append(objective)
         tiny = np.finfo(np.float64).tiny
@@ -229,7 +231,9 @@ class _Iteration:
             self.best, self.since_best = self.optimality, 0
         elif self.since_best >= PATIENCE:
             self.dual_steps, self.since_best = min(self.dual_steps + 1, MOST_DUAL_STEPS), 0
-        self.x_before, self.hx_before, self.x, self.hx, self.t = self.x, self.hx, x, hx, t_next
+        is_uphill = restart > 0 or objective > 0.5 * self.data_energy
+        self.x_before, self.hx_before = (x, hx) if is_uphill else (self.x, self.hx)
+        self.x, self.hx = x, hx
         self.iterations += 1
 
     def _prox(self, v: NDArray[Any]) -> tuple[NDArray[Any], float, float]:
