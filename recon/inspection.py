@@ -21,6 +21,7 @@ from recon.errors import InvalidScan
 from recon.findings import Finding
 from recon.formats.image_layout import voxel_size_mm
 from recon.grid import image_grid
+from recon.levels import ChannelLevels
 from recon.sampling import (
     FrameUnion,
     SamplingFacts,
@@ -29,6 +30,7 @@ from recon.sampling import (
     readout_finding,
 )
 from recon.scan import PlaneIndex, Scan, cropped_readout, readout_pattern
+from recon.spikes import SpikeCount, find_spikes
 
 #: magnitudes of k-space that single-precision arithmetic can square without harm.
 SMALLEST_VALUE: Final = 1e-15
@@ -54,6 +56,8 @@ class Inspection:
         Which of the optional objects the scan has; rows and columns of `/reference` and `/sensitivity` (of a volume
         kz and ky of the one, z, y and x of the other), those of the reference without readout oversampling where the
         scan is solved without it.
+    channels : dict
+        Positions of coils that are `dead`, or `silent_in_noise`.
     findings : list of Finding
     """
 
@@ -61,6 +65,7 @@ class Inspection:
     sampling: dict[str, Any]
     objects: dict[str, Any]
     image: dict[str, Any]
+    channels: dict[str, list[int]]
     title: str | None
     findings: list[Finding] = field(default_factory=list)
 
@@ -73,6 +78,7 @@ class Inspection:
             "sampling": self.sampling,
             "objects": self.objects,
             "image": self.image,
+            "channels": self.channels,
             "findings": [finding.as_dict() for finding in self.findings],
         }
 
@@ -91,6 +97,8 @@ class Inspector:
         self.empty_positions = 0
         self.empty_first: str | None = None
         self.largest = 0.0
+        self.levels = ChannelLevels(scan.coils)
+        self.spikes = SpikeCount(scan.plane_axes)
 
     def read(self, index: PlaneIndex) -> Samples:
         """Read one plane, look at it, and return the mean of its averages.
@@ -147,6 +155,9 @@ class Inspector:
         if empty and self.empty_first is None:
             self.empty_first = where.strip(" ,") or "the plane"
         self.largest = max(self.largest, float(np.abs(kspace).max()))
+        if self.largest <= LARGEST_VALUE:  # else refused in the end, and squares would overflow
+            self.levels.see(kspace, mask)
+            self.spikes.see(where.removeprefix(" in "), find_spikes(kspace, mask))
 
     def finish(self) -> Inspection:
         """Facts and findings of everything seen.
@@ -165,6 +176,8 @@ class Inspector:
                 f"the largest value of /kspace is {self.largest:.1e}; accepted is {SMALLEST_VALUE:g} to "
                 f"{LARGEST_VALUE:g}: multiply /kspace and /noise by one factor that brings it near 1"
             )
+        check_finite(scan)
+        channels = self.levels.judge(scan.noise())
         grid = image_grid(scan)
         encoded = scan.plane_shape[1]
         solved = encoded if self.sampling.varies_along_columns or scan.is_volume else cropped_readout(scan)
@@ -191,8 +204,14 @@ class Inspector:
                 "solved_plane": [scan.plane_shape[0], solved],
                 "pixel_size_mm": voxel_size_mm(scan, grid),
             },
+            channels=channels.as_dict(),
             title=scan.title,
-            findings=[*scan.findings, *self._findings()],
+            findings=[
+                *scan.findings,
+                *self._findings(),
+                *channels.findings(),
+                *self.spikes.findings(),
+            ],
         )
 
     def _coverage(self) -> dict[str, Coverage]:

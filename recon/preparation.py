@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any, NamedTuple
 
 import numpy as np
@@ -14,6 +14,8 @@ from recon.coils.compression import Compression
 from recon.coils.gathering import Calibration, Gatherer
 from recon.coils.maps import CoilMaps, MapMaker, MapMethod, squared_gain
 from recon.coils.noise import Whitening, estimate_whitening
+from recon.errors import InvalidScan
+from recon.exclusion import Excluded, leave_out
 from recon.feasibility import check_job, needs_maps
 from recon.grid import ImageGrid, image_grid
 from recon.inspection import Inspection, Inspector, check_finite
@@ -77,6 +79,8 @@ class Preparation:
         What the maps are computed from, by slice.
     mean_count : float
         Samples behind a sampled position, in the mean.
+    excluded : Excluded
+        What was left out of the scan on request.
     """
 
     scan: Scan
@@ -92,6 +96,7 @@ class Preparation:
     mean_count: float = 1.0
     compressions: Mapping[int, Compression] = field(default_factory=dict)
     volume: Volume | None = None
+    excluded: Excluded = field(default_factory=Excluded)
 
     @property
     def image_grid(self) -> ImageGrid:
@@ -136,6 +141,7 @@ class Preparation:
         compressions, grid = [*self.compressions.values()] or [self.compression], self.image_grid
         return {
             "whitening": {"source": self.whitening.source, "samples": self.whitening.samples},
+            "excluded": self.excluded.as_dict(),
             "averages": {"mean_count": self.mean_count},
             "matrix": {
                 "axes": list(grid.axes),
@@ -172,14 +178,18 @@ def prepare(scan: Scan, settings: Settings, report: Report) -> Preparation:
     InvalidSettings
         For settings that do not fit the scan.
     """
+    scan, seen, excluded = leave_out(scan, settings, report)
     volume = None
     if scan.is_volume:
         volume = read_volume(scan, settings, report)
+        volume = volume if seen is None else replace(volume, inspection=seen)
         scan = volume.planes
     method = _map_method(scan, settings)
     shape = _solved_shape(scan)
-    known = None if volume is None else volume.inspection
+    known = seen if volume is None else volume.inspection
     inspection, calibration, shape = _read(scan, shape, method, report, known)
+    if method == "supplied":
+        _check_map_columns(scan, shape[1])
     mean_count = float(inspection.sampling["samples_per_position"]["mean"])
     if mean_count != 1:
         unit = float(1 / np.sqrt(mean_count))
@@ -187,7 +197,8 @@ def prepare(scan: Scan, settings: Settings, report: Report) -> Preparation:
     check_job(inspection.as_dict(), settings)
     check_finite(scan)
     report("whiten", 0.0)
-    whitening = estimate_whitening(scan, mean_count, scan if volume is None else volume.slabs)
+    silent = excluded.renumbered(inspection.channels["silent_in_noise"])
+    whitening = estimate_whitening(scan, mean_count, scan if volume is None else volume.slabs, silent)
     resolved = resolve_strengths(settings, has_noise_units=whitening.has_noise_units)
     report("crop", 0.0)
     report("compress", 0.0)
@@ -223,6 +234,7 @@ def prepare(scan: Scan, settings: Settings, report: Report) -> Preparation:
         mean_count=mean_count,
         compressions=compressions,
         volume=volume,
+        excluded=excluded,
     )
 
 
@@ -257,6 +269,15 @@ def _map_method(scan: Scan, settings: Settings) -> MapMethod | None:
     if settings.coil_maps == "auto":
         return "supplied" if scan.sensitivity_array is not None else "eigenvector"
     return settings.coil_maps
+
+
+def _check_map_columns(scan: Scan, columns: int) -> None:
+    maps = scan.sensitivity_array
+    if maps is not None and maps.sizes[maps.axes[-1]] < columns:
+        raise InvalidScan(
+            f"/sensitivity has {maps.sizes[maps.axes[-1]]} columns, but readouts have gaps, so that the image is "
+            f"solved with its oversampling: supply maps with {columns} columns"
+        )
 
 
 def _solved_shape(scan: Scan) -> tuple[int, int]:

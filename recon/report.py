@@ -129,8 +129,12 @@ def build_report(
         *noise_findings(preparation.whitening, scan.noise_attributes, scan.attributes),
         *map_findings(map_figures, "slice" if preparation.volume is None else "x"),
         *solver.findings(preparation),
+        *preparation.excluded.findings(),
     ]
     figures = residuals.as_dict()
+    if figures["reduced_chi_squared"] is not None:
+        by_coil = figures["reduced_chi_squared"]["by_coil"]
+        figures["reduced_chi_squared"]["by_coil"] = preparation.excluded.with_gaps(by_coil)
     if preparation.map_method is None:
         figures = {"reduced_chi_squared": None, "relative_residual": None}
     if not preparation.whitening.has_noise_units:

@@ -15,6 +15,7 @@ from recon.averages import Mean, Samples
 from recon.axes import COMPLEX_AXIS, KSPACE_AXES, OUTER_AXES, LabelledArray, image_axis
 from recon.errors import InvalidScan
 from recon.findings import Finding
+from recon.spikes import remove_spikes
 
 
 class PlaneIndex(NamedTuple):
@@ -56,6 +57,8 @@ class Scan:
         Optional root attributes.
     findings : list of Finding
         What the reader noticed.
+    drops_spikes : bool
+        Whether spikes (see `recon.spikes`) count as not sampled.
     """
 
     kspace_array: LabelledArray
@@ -70,6 +73,7 @@ class Scan:
     repetition_time_ms: float | None = None
     findings: list[Finding] = field(default_factory=list)
     file: Closeable | None = None
+    drops_spikes: bool = False
 
     def __post_init__(self) -> None:
         validate(self)
@@ -119,6 +123,11 @@ class Scan:
         return self.axes.get("average", 1)
 
     @property
+    def keeps_readouts(self) -> bool:
+        """Whether readouts are left out as a whole or not at all."""
+        return False
+
+    @property
     def outer_axes(self) -> tuple[str, ...]:
         """Those of `frame slice contrast` that the scan has, in canonical order."""
         return tuple(axis for axis in OUTER_AXES if axis in self.axes)
@@ -149,7 +158,10 @@ class Scan:
         """Read the averages of one plane one by one: samples (coil, rows, columns) as stored, and their mask."""
         for average in range(self.averages):
             kspace = self._kspace(index, average)
-            yield kspace, self._mask(index, average, kspace)
+            mask = self._mask(index, average, kspace)
+            if self.drops_spikes:
+                mask = remove_spikes(kspace, mask, whole_lines=self.keeps_readouts)
+            yield kspace, mask
 
     def samples(self, index: PlaneIndex) -> Samples:
         """Read one plane: the mean of its averages, zero where not sampled, and how many samples are behind it."""

@@ -87,6 +87,17 @@ class KeepCoils(BaseModel):
 Strength = Annotated[float | Literal["auto"], BeforeValidator(_strength)]
 
 
+EXCLUDABLE: Final = ("dead-coils", "spikes")
+Excludable = Literal["dead-coils", "spikes"]
+
+
+def _exclude(value: object) -> object:
+    accepted = f"a list of any of {', '.join(EXCLUDABLE)}"
+    if not isinstance(value, list | tuple) or any(item not in EXCLUDABLE for item in value):
+        raise ValueError(f"expected {accepted}, received {value!r}")
+    return tuple(item for item in EXCLUDABLE if item in value)
+
+
 class Settings(BaseModel):
     """How one scan is reconstructed.
 
@@ -112,6 +123,8 @@ class Settings(BaseModel):
         images' own, which needs no maps.
     volume : {"planes"}
         Of a scan with `kz ky kx`: every readout position alone (its mask must not vary along `kx`).
+    exclude : list of {"dead-coils", "spikes"}
+        What is left out of the scan before anything is made of it; found and reported whether it is left out or not.
     tolerance : float
         The solver stops when its relative optimality residual falls below this; single precision ends near 1e-6.
     max_iterations : int
@@ -135,6 +148,7 @@ class Settings(BaseModel):
     ] = "auto"
     combination: Literal["sensitivity", "root-sum-of-squares"] = "sensitivity"
     volume: Literal["planes"] = "planes"
+    exclude: Annotated[tuple[Excludable, ...], BeforeValidator(_exclude)] = ()
     tolerance: float = Field(default=5e-5, ge=1e-6, lt=1, strict=True, allow_inf_nan=False)
     max_iterations: int = Field(default=300, ge=1, le=100_000, strict=True)
 

@@ -62,6 +62,11 @@ class _Blocks:
 class Slabs(Scan):
     """A volume as a stack: each `kz` is one `slice` of (`ky`, `kx`)."""
 
+    @property
+    def keeps_readouts(self) -> bool:
+        """See `Scan.keeps_readouts`: only complete ones can be transformed on their own."""
+        return True
+
     def planes(self) -> list[PlaneIndex]:
         """Every slab, volume by volume, in the order that a file is read fastest."""
         return sorted(super().planes(), key=lambda index: (index.frame, index.contrast, index.slice))
@@ -81,6 +86,7 @@ def slabs(scan: Scan) -> Slabs:
         noise_array=scan.noise_array,
         attributes=scan.attributes,
         noise_attributes=scan.noise_attributes,
+        drops_spikes=scan.drops_spikes,
     )
 
 

@@ -15,6 +15,7 @@ from recon.findings import Finding
 from recon.inspection import Inspection, Inspector
 from recon.sampling import is_partial_echo, readout_finding
 from recon.scan import PlaneIndex, Scan
+from recon.spikes import SpikeCount
 from recon.volume import Key, slabs
 
 
@@ -77,6 +78,7 @@ class VolumeInspector(Inspector):
     def __init__(self, scan: Scan) -> None:
         super().__init__(scan)
         self.source = self.slabs = slabs(scan)
+        self.spikes = SpikeCount(self.slabs.plane_axes)
         self.patterns: dict[Key, Pattern] = {}
 
     def _count(self, index: PlaneIndex, samples: Samples) -> None:

@@ -6,6 +6,7 @@ residuals and intensities no longer depend on the receiver (Pruessmann 2001; Kel
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Any, Final
 
@@ -127,7 +128,9 @@ def whitening_from(covariance: NDArray[Any], source: str, samples: int) -> White
     )
 
 
-def estimate_whitening(scan: Scan, mean_count: float = 1.0, periphery: Scan | None = None) -> Whitening:
+def estimate_whitening(
+    scan: Scan, mean_count: float = 1.0, periphery: Scan | None = None, silent: Sequence[int] = ()
+) -> Whitening:
     """Whitening from `/noise`, or from the periphery of k-space where there is none.
 
     Parameters
@@ -137,6 +140,9 @@ def estimate_whitening(scan: Scan, mean_count: float = 1.0, periphery: Scan | No
         Samples behind a sampled position, in the mean: the noise of their mean has Psi over that as its covariance.
     periphery : Scan, optional
         Where to look for the periphery, if not in the scan itself.
+    silent : sequence of int
+        Coils that `/noise` does not show: they get the median variance of the others, since without any noise they
+        would have all the weight.
 
     Raises
     ------
@@ -152,7 +158,7 @@ def estimate_whitening(scan: Scan, mean_count: float = 1.0, periphery: Scan | No
             scan.attributes.get("sample_time_us"),
             scan.noise_attributes.get("receiver_noise_bandwidth"),
         )
-        covariance = sample_covariance(noise) * (scale / mean_count)
+        covariance = _completed(sample_covariance(noise), silent) * (scale / mean_count)
         return whitening_from(covariance, "noise-scan", noise.shape[1])
     covariance, samples, largest = periphery_covariance(periphery or scan)
     if largest == 0.0 or np.sqrt(np.trace(covariance).real / scan.coils) <= ROUNDING * largest:
@@ -161,6 +167,17 @@ def estimate_whitening(scan: Scan, mean_count: float = 1.0, periphery: Scan | No
         return Whitening(identity / unit, identity * unit, identity * 0, "none", 0)
     # what signal is left out there is coherent between coils and would be whitened away: variances alone are trusted
     return whitening_from(np.diag(np.diag(covariance)) / mean_count, "periphery", samples)
+
+
+def _completed(covariance: NDArray[Any], silent: Sequence[int]) -> NDArray[Any]:
+    """The covariance with the silent coils uncorrelated and as noisy as the others are in the median."""
+    if not silent:
+        return covariance
+    completed = covariance.copy()
+    others = np.delete(np.diag(covariance).real, silent)
+    completed[silent, :] = completed[:, silent] = 0
+    completed[silent, silent] = np.median(others)
+    return completed
 
 
 def periphery_covariance(scan: Scan) -> tuple[NDArray[Any], int, float]:

@@ -144,7 +144,8 @@ def test_missing_end_of_every_readout_is_seen() -> None:
 @pytest.mark.parametrize(
     ("change", "code"),
     [
-        ("silent-coil", "noise-clamped"),
+        ("silent-coil", "coil-silent-in-noise"),
+        ("doubled-coil", "noise-clamped"),
         ("one-dwell-time", "dwell-time-incomplete"),
         ("faint", "maps-incomplete"),
     ],
@@ -156,6 +157,11 @@ def test_what_preparation_reports(change: str, code: str) -> None:
     if change == "silent-coil":
         noise = np.array(scan.noise_array.data)
         noise[2] = 0
+        scan = replace(scan, noise_array=LabelledArray(noise, ("coil", "sample")))
+    elif change == "doubled-coil":
+        assert scan.noise_array is not None
+        noise = np.array(scan.noise_array.data)
+        noise[2] = noise[1]
         scan = replace(scan, noise_array=LabelledArray(noise, ("coil", "sample")))
     elif change == "one-dwell-time":
         scan = replace(scan, noise_attributes={"sample_time_us": 4.0})
