@@ -11,6 +11,7 @@ from recon.coils.maps import MapFigures
 from recon.consistency import ResidualFigures
 from recon.findings import Finding
 from recon.operators.wavelet import Wavelet
+from recon.overfitting import least_squares_findings
 from recon.preparation import Preparation
 from recon.scan import PlaneIndex
 from recon.solver import Solution
@@ -130,6 +131,7 @@ def build_report(
         *map_findings(map_figures, "slice" if preparation.volume is None else "x"),
         *solver.findings(preparation),
         *preparation.excluded.findings(),
+        *least_squares_findings(preparation.settings, float(inspection.sampling["sampled_fraction"])),
     ]
     figures = residuals.as_dict()
     if figures["reduced_chi_squared"] is not None:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -17,6 +18,7 @@ from recon.pipeline import reconstruct
 from recon.scan import Scan
 from recon.settings import Settings
 from tests.recon.helpers import Array, complex_normal
+from tests.recon.scans import example
 
 AXES = ("coil", "ky", "kx")
 
@@ -195,3 +197,18 @@ def test_two_image_difference_and_background_give_the_same_signal_to_noise_ratio
     tolerance = 4 / math.sqrt(2 * inside.sum())
     assert by_difference == pytest.approx(truth, rel=tolerance)
     assert by_background == pytest.approx(truth, rel=tolerance)
+
+
+def test_image_does_not_depend_on_the_dwell_time_of_the_noise_scan() -> None:
+    """Source: Kellman & McVeigh 2005: four times the bandwidth, filtered to 0.75 of it, and readouts oversampled."""
+    found = example(attributes={"readout_oversampling": 2.0, "sample_time_us": 8.0})
+    assert found.scan.noise_array is not None
+    noise = np.asarray(found.scan.noise_array.data)
+    faster = LabelledArray((noise * np.sqrt(4 * 0.75)).astype(np.complex64), ("coil", "sample"))
+    attributes = {"sample_time_us": 2.0, "receiver_noise_bandwidth": 0.75}
+    first = reconstruct(replace(found.scan, noise_attributes={"sample_time_us": 8.0}))
+    second = reconstruct(replace(found.scan, noise_array=faster, noise_attributes=attributes))
+    assert np.abs(second.image - first.image).max() < 1e-4 * np.abs(first.image).max()
+    chi = [each.report["consistency"]["reduced_chi_squared"]["value"] for each in (first, second)]
+    assert chi[1] == pytest.approx(chi[0], rel=1e-3)
+    assert 0.6 < chi[0] < 1.1
