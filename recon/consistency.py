@@ -52,8 +52,8 @@ class ResidualFigures:
 
     Parameters
     ----------
-    shape : (rows, columns)
-        Of a plane.
+    shape : (rows, columns) or (slabs, rows, columns)
+        Of a plane; or of a volume that comes in slabs, their `slice` being the first axis.
     whitening : Whitening
         Made from n samples: its whitener carries the correction for that, and `by_coil`, which divides by each coil's
         estimated variance instead, is corrected by (n - 1) / n.
@@ -64,15 +64,18 @@ class ResidualFigures:
     """
 
     def __init__(
-        self, shape: tuple[int, int], whitening: Whitening, sizes: dict[str, int], *, is_volume: bool = False
+        self, shape: tuple[int, ...], whitening: Whitening, sizes: dict[str, int], *, is_volume: bool = False
     ) -> None:
         self.is_volume = is_volume
         self.whitening = whitening
         coils = len(whitening.covariance)
         self.coil_correction = (whitening.samples - 1) / whitening.samples if whitening.samples > 1 else 1.0
-        radius = np.hypot(*(_normalised_distance(n, axis) for axis, n in enumerate(shape)))
-        self.ring = np.minimum((radius / RING_WIDTH + 1e-9).astype(int), int(np.sqrt(2) / RING_WIDTH))
-        self.rings = int(self.ring.max()) + 1
+        self._from_slab = _normalised_distance(shape[0]) if len(shape) == 3 else None
+        self._radius = np.hypot(
+            _normalised_distance(shape[-2])[:, np.newaxis], _normalised_distance(shape[-1])
+        )
+        self._last_ring = int(np.sqrt(len(shape)) / RING_WIDTH)
+        self.rings = self._last_ring + 1
         self.by_ring = np.zeros((2, self.rings))
         self.by_coil = np.zeros((2, coils))
         self.by_outer = {axis: np.zeros((2, sizes[axis])) for axis in OUTER_AXES if axis in sizes}
@@ -89,7 +92,7 @@ class ResidualFigures:
         whole = np.array([per_position.sum(), coils * positions])
         self.total += whole
         self.energy += float(np.sum(np.abs(kspace[:, mask]) ** 2, dtype=np.float64))
-        rings = self.ring[mask]
+        rings = self._rings(index.slice)[mask]
         self.by_ring[0] += np.bincount(rings, per_position[mask], self.rings)
         self.by_ring[1] += coils * np.bincount(rings, minlength=self.rings)
         physical = mix(self.whitening.unwhitener, residuals)
@@ -97,6 +100,13 @@ class ResidualFigures:
         self.by_coil[1] += positions * np.real(np.diag(self.whitening.covariance))
         for axis, sums in self.by_outer.items():
             sums[:, getattr(index, axis)] += whole
+
+    def _rings(self, position: int) -> NDArray[np.int64]:
+        """Ring of every position of a plane, or of a slab."""
+        radius = self._radius
+        if self._from_slab is not None:
+            radius = np.hypot(radius, self._from_slab[position])
+        return np.minimum((radius / RING_WIDTH + 1e-9).astype(np.int64), self._last_ring)
 
     def as_dict(self) -> dict[str, Any]:
         """The report's `consistency`; chi-squared figures are null where the scan is free of noise."""
@@ -146,6 +156,5 @@ def _ratios(sums: NDArray[Any], correction: float = 1.0) -> list[float | None]:
     return [correction * float(a / b) if b > 0 else None for a, b in sums.T]
 
 
-def _normalised_distance(n: int, axis: int) -> NDArray[np.float64]:
-    distance = (np.arange(n) - n // 2) / max(n / 2, 1)
-    return distance.reshape((-1, 1) if axis == 0 else (1, -1))
+def _normalised_distance(n: int) -> NDArray[np.float64]:
+    return np.asarray((np.arange(n) - n // 2) / max(n / 2, 1))

@@ -80,6 +80,12 @@ def calibration_sides(sampling: Mapping[str, Any]) -> tuple[int, int]:
 def _check_volume(facts: Mapping[str, Any], settings: Settings) -> None:
     axes = facts["axes"]
     if not {"kz", "ky", "kx"} <= set(axes):
+        if settings.volume == "joint":
+            _refuse(
+                "/volume",
+                f"received joint for a scan with the axes {', '.join(axes)}; accepted is joint where kz, ky and kx are "
+                f"all there: label the axes of /kspace so, or choose planes",
+            )
         return
     for name in ("temporal_strength", "low_rank_strength"):
         if axes.get("frame", 1) > 1 and getattr(settings, name) != 0:
@@ -88,11 +94,11 @@ def _check_volume(facts: Mapping[str, Any], settings: Settings) -> None:
                 f"received {getattr(settings, name)} for a volume with frames; accepted is 0: each frame is a volume "
                 f"of its own",
             )
-    if facts["sampling"]["varies_along_readout"]:
+    if settings.volume == "planes" and facts["sampling"]["varies_along_readout"]:
         _refuse(
             "/volume",
             "received planes, but the mask varies along kx, so that readouts cannot be transformed on their own; "
-            "choose a mask that is constant along kx",
+            "choose joint, or a mask that is constant along kx",
         )
 
 

@@ -21,16 +21,17 @@ def density_weights(mask: NDArray[np.bool_]) -> NDArray[np.float32]:
 
     Parameters
     ----------
-    mask : bool (rows, columns)
+    mask : bool (rows, columns) or (slabs, rows, columns)
 
     Returns
     -------
-    float32 (rows, columns)
+    float32, shape of the mask
     """
     acceleration = mask.size / max(int(mask.sum()), 1)
-    is_constant = bool((mask == mask[:, :1]).all())
-    side = 2 * int(np.ceil(acceleration if is_constant else np.sqrt(acceleration))) + 1
-    window = (side, 1) if is_constant else (side, side)
+    is_constant = bool((mask == mask[..., :1]).all())
+    free = mask.ndim - is_constant
+    side = 2 * int(np.ceil(acceleration ** (1 / free))) + 1
+    window = (*(side,) * free, *(1,) * is_constant)
     density = uniform_filter(mask.astype(np.float64), window, mode="nearest")
     return np.asarray(np.divide(mask, density, out=np.zeros(mask.shape), where=mask), np.float32)
 

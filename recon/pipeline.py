@@ -14,7 +14,7 @@ from collections import OrderedDict
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Any, Final, Protocol
+from typing import Any, Final
 
 import numpy as np
 from numpy.typing import NDArray
@@ -25,9 +25,10 @@ from recon.consistency import ResidualFigures
 from recon.errors import InvalidScan
 from recon.formats import ImageWriter, open_scan
 from recon.grid import image_grid
+from recon.joint import run_joint
 from recon.parallel import in_order
 from recon.plane import PlaneResult, reconstruct_together
-from recon.preparation import Plane, Preparation, prepare
+from recon.preparation import Plane, Preparation, Sink, prepare
 from recon.report import SolverFigures, build_report
 from recon.scan import PlaneIndex, Scan
 from recon.settings import Settings
@@ -42,13 +43,6 @@ STAGES: Final = (
 #: share of the whole job that is over when the first plane's maps begin, and when the last plane is written.
 _PREPARED: Final = 0.05
 _PLANES_DONE: Final = 0.98
-
-
-class Sink(Protocol):
-    """Where finished planes go."""
-
-    def write(self, name: str, index: PlaneIndex, plane: NDArray[np.complex64]) -> None:
-        """Store one plane of `image` or `residual_image`."""
 
 
 @dataclass(frozen=True)
@@ -175,12 +169,17 @@ def _sink(preparation: Preparation, target: _Memory | ImageWriter) -> Sink:
     """Where planes go: straight to the target, or through a collector of a volume's readout positions."""
     if preparation.volume is None:
         return target
-    return PositionSink(target, preparation.image_grid)
+    grid = preparation.image_grid
+    # a volume solved in k-space is brought to its grid as a whole
+    positions = grid.kept[-1] if preparation.volume.is_complete else grid.written[-1]
+    return PositionSink(target, positions, grid.written[-1])
 
 
 def _run(
     preparation: Preparation, sink: Sink, tell: _Teller, provenance: Mapping[str, Any], threads: int
 ) -> dict[str, Any]:
+    if preparation.is_joint:
+        return run_joint(preparation, sink, tell, provenance)
     residuals = ResidualFigures(
         preparation.shape,
         preparation.whitening,

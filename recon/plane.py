@@ -70,7 +70,7 @@ def reconstruct_together(
     u, solution = _solve(preparation, maps, planes, callback)
     frames = [u] if len(planes) == 1 else u
     return [
-        _finish(preparation, maps, frame, plane, solution)
+        finish_plane(preparation, maps, frame, plane, solution)
         for frame, plane in zip(frames, planes, strict=True)
     ]
 
@@ -101,7 +101,7 @@ def _solve(
     return solution.image, solution
 
 
-def _finish(
+def finish_plane(
     preparation: Preparation,
     maps: CoilMaps,
     u: NDArray[Any],

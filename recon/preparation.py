@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field, replace
-from typing import Any, NamedTuple
+from typing import Any, NamedTuple, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
@@ -26,6 +26,13 @@ from recon.strengths import resolve_strengths
 from recon.volume_reading import Volume, read_volume
 
 Report = Callable[[str, float], None]
+
+
+class Sink(Protocol):
+    """Where finished planes go."""
+
+    def write(self, name: str, index: PlaneIndex, plane: NDArray[np.complex64]) -> None:
+        """Store one plane of `image` or `residual_image`; of a volume one readout position (z, y), `slice` being x."""
 
 
 class Plane(NamedTuple):
@@ -103,6 +110,18 @@ class Preparation:
         """The grid of an image plane, or of a volume."""
         return self.grid if self.volume is None else self.volume.grid
 
+    @property
+    def is_joint(self) -> bool:
+        """Whether the readout positions of a volume are one problem; without iteration nothing ties complete ones."""
+        if self.volume is None or self.settings.volume != "joint":
+            return False
+        return self.settings.method != "zero-filled" or not self.volume.is_complete
+
+    @property
+    def solved_shape(self) -> tuple[int, ...]:
+        """Of the image as it is solved, at once or plane by plane."""
+        return self.shape if self.volume is None else (*self.shape, self.scan.axes["slice"])
+
     def compression_of(self, position: int) -> Compression:
         """The virtual coils of one slice."""
         return self.compressions.get(position, self.compression)
@@ -146,7 +165,7 @@ class Preparation:
             "matrix": {
                 "axes": list(grid.axes),
                 "encoded": list(grid.encoded),
-                "solved": [*self.shape, *grid.kept[2:]],
+                "solved": list(self.solved_shape),
                 "kept": list(grid.kept),
                 "written": list(grid.written),
             },
@@ -211,7 +230,7 @@ def prepare(scan: Scan, settings: Settings, report: Report) -> Preparation:
     mean_gram = np.average(np.stack([*grams.values()]), axis=0, weights=shares)
     compression = Compression(mean_gram, rule, has_noise_units=has_units)
     compressions = {}
-    if volume is not None and rule is not None:
+    if volume is not None and settings.volume == "planes" and rule is not None:
         compressions = {
             position: Compression(gram, rule, has_noise_units=has_units, dominant=compression.dominant)
             for position, gram in grams.items()

@@ -52,15 +52,19 @@ class SolverFigures:
         settings = preparation.settings
         return {
             "method": settings.method,
-            "planes": self.planes if preparation.volume is None else self._positions(),
+            "planes": self.planes if preparation.volume is None else self._of_volume(preparation),
             "converged_planes": sum(plane["stop_reason"] != "iteration-limit" for plane in self.planes),
             "iterations": sum(plane["iterations"] for plane in self.planes),
             "worst_optimality": max((plane["optimality"] for plane in self.planes), default=None),
             "tolerance": settings.tolerance,
         }
 
-    def _positions(self) -> list[dict[str, Any]]:
+    def _of_volume(self, preparation: Preparation) -> list[dict[str, Any]]:
         """Planes of a volume by their place, the objective's curve of a few: a report stays small."""
+        if preparation.is_joint:
+            return [
+                {name: value for name, value in plane.items() if name != "slice"} for plane in self.planes
+            ]
         every = max(1, -(-len(self.planes) // CURVES))
         positions = []
         for number, plane in enumerate(self.planes):
@@ -89,14 +93,15 @@ class SolverFigures:
                 )
             )
         uses_wavelet = settings.method == "compressed-sensing" and settings.wavelet_strength != 0
-        if uses_wavelet and Wavelet(preparation.shape, settings.wavelet).levels == 0:
-            rows, columns = preparation.shape
+        shape = preparation.solved_shape if preparation.is_joint else preparation.shape
+        pixels = " x ".join(str(n) for n in shape)
+        if uses_wavelet and Wavelet(shape, settings.wavelet).levels == 0:
             found.append(
                 Finding(
                     "wavelet-too-long",
                     "warning",
-                    f"The wavelet {settings.wavelet} does not fit a plane of {rows} x {columns}, so the wavelet "
-                    f"penalty has no effect: choose a shorter one such as haar.",
+                    f"The wavelet {settings.wavelet} does not fit {pixels} pixels, so the wavelet penalty "
+                    f"has no effect: choose a shorter one such as haar.",
                     "solver",
                 )
             )

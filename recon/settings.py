@@ -121,8 +121,10 @@ class Settings(BaseModel):
     combination : {"sensitivity", "root-sum-of-squares"}
         Of iterative methods the latter is the magnitude sqrt(sum_c |S_c m|^2), which is |m|; of `zero-filled`, the coil
         images' own, which needs no maps.
-    volume : {"planes"}
-        Of a scan with `kz ky kx`: every readout position alone (its mask must not vary along `kx`).
+    volume : {"planes", "joint"}
+        Of a scan with `kz ky kx`: every readout position alone (its mask must not vary along `kx`), or all as one
+        problem, whose wavelets and total variation act along three axes. Where readouts are complete, a method without
+        iteration gives the same in both.
     exclude : list of {"dead-coils", "spikes"}
         What is left out of the scan before anything is made of it; found and reported whether it is left out or not.
     tolerance : float
@@ -147,7 +149,7 @@ class Settings(BaseModel):
         Literal["auto"] | KeepEnergy | KeepCoils | None, BeforeValidator(_compression)
     ] = "auto"
     combination: Literal["sensitivity", "root-sum-of-squares"] = "sensitivity"
-    volume: Literal["planes"] = "planes"
+    volume: Literal["planes", "joint"] = "planes"
     exclude: Annotated[tuple[Excludable, ...], BeforeValidator(_exclude)] = ()
     tolerance: float = Field(default=5e-5, ge=1e-6, lt=1, strict=True, allow_inf_nan=False)
     max_iterations: int = Field(default=300, ge=1, le=100_000, strict=True)

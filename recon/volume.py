@@ -225,6 +225,27 @@ def read_lines(
     return lines
 
 
+def read_centre(source: Slabs, key: Key, sides: tuple[int, int, int]) -> Lines:
+    """Read the central block (kz, ky, kx) of a volume and interpolate it to every readout position.
+
+    Noise keeps unit variance for each sample, though samples of neighbouring positions now share it.
+    """
+    encoded = source.axes["kx"]
+    rows, columns = source.axes["slice"], source.axes["ky"]
+    first_z, first_y, first_x = (
+        n // 2 - side // 2 for n, side in zip((rows, columns, encoded), sides, strict=True)
+    )
+    block = np.zeros((source.coils, sides[0], sides[1], encoded), np.complex64)
+    counts = np.zeros((rows, columns), np.int64)
+    inside = slice(first_y, first_y + sides[1]), slice(first_x, first_x + sides[2])
+    for row in range(sides[0]):
+        samples = source.samples(PlaneIndex(key[0], first_z + row, key[1]))
+        block[:, row, :, inside[1]] = samples.kspace[:, *inside]
+        counts[first_z + row, inside[0]] = np.maximum(samples.counts[inside].min(axis=1), 1)
+    hybrid = inverse_transform(block, (-1,)) * np.float32(np.sqrt(encoded / sides[2]))
+    return Lines(np.ascontiguousarray(np.moveaxis(hybrid.reshape(source.coils, -1, encoded), -1, 0)), counts)
+
+
 def _hybrid_reference(scan: Scan, positions: int) -> LabelledArray | None:
     """`/reference` along the readout in image space, its matrix there brought to that of the scan."""
     if scan.reference_array is None:

@@ -5,13 +5,14 @@ from __future__ import annotations
 from collections.abc import Callable
 from dataclasses import dataclass
 
+from recon.coils.calibration import LARGEST_BLOCK
 from recon.feasibility import check_job
 from recon.grid import ImageGrid, image_grid
 from recon.inspection import Inspection, check_finite
 from recon.scan import Scan
 from recon.settings import Settings
-from recon.volume import PlaneScan, Slabs, plane_scan, read_lines
-from recon.volume_inspection import VolumeInspector
+from recon.volume import PlaneScan, Slabs, plane_scan, read_centre, read_lines
+from recon.volume_inspection import Pattern, VolumeInspector
 
 
 @dataclass(frozen=True)
@@ -29,6 +30,9 @@ class Volume:
     inspection : Inspection
     grid : ImageGrid
         Of the volume's image.
+    is_complete : bool
+        Whether the mask is constant along `kx`. Otherwise the planes hold the fully sampled centre alone, for the coil
+        maps, and the volume is solved in k-space.
     """
 
     scan: Scan
@@ -36,6 +40,7 @@ class Volume:
     planes: PlaneScan
     inspection: Inspection
     grid: ImageGrid
+    is_complete: bool
 
 
 def read_volume(scan: Scan, settings: Settings, report: Callable[[str, float], None]) -> Volume:
@@ -57,6 +62,22 @@ def read_volume(scan: Scan, settings: Settings, report: Callable[[str, float], N
     inspection = inspector.finish()
     check_job(inspection.as_dict(), settings)
     check_finite(scan)
-    counts = {key: pattern.lines for key, pattern in inspector.patterns.items()}
-    lines = read_lines(inspector.slabs, counts, lambda fraction: report("read", (1 + fraction) / 2))
-    return Volume(scan, inspector.slabs, plane_scan(scan, lines), inspection, image_grid(scan))
+    patterns = inspector.patterns
+    is_complete = all(pattern.full is None for pattern in patterns.values())
+    if is_complete:
+        counts = {key: pattern.lines for key, pattern in patterns.items()}
+        lines = read_lines(inspector.slabs, counts, lambda fraction: report("read", (1 + fraction) / 2))
+    else:
+        lines = {
+            key: read_centre(inspector.slabs, key, _centre(pattern)) for key, pattern in patterns.items()
+        }
+    return Volume(scan, inspector.slabs, plane_scan(scan, lines), inspection, image_grid(scan), is_complete)
+
+
+def _centre(pattern: Pattern) -> tuple[int, int, int]:
+    """Sides of the block that stands for a volume in coil calibration: fully sampled where there is such a block."""
+    sides = pattern.calibration()
+    if min(sides) == 0:
+        sides = (*pattern.lines.shape, pattern.columns)
+    z, y, x = (min(n, LARGEST_BLOCK) for n in sides)
+    return z, y, x

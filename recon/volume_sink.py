@@ -8,7 +8,6 @@ import numpy as np
 from numpy.typing import NDArray
 
 from recon.formats.image_layout import VOLUME_CHUNK
-from recon.grid import ImageGrid
 from recon.operators.fourier import zero_fill
 from recon.scan import PlaneIndex
 
@@ -33,13 +32,15 @@ class PositionSink:
     Parameters
     ----------
     target : VolumeSink
-    grid : ImageGrid
-        Of the volume, axes z, y, x; planes come as it says along z and y.
+    positions : int
+        Readout positions that come.
+    written : int
+        Readout positions of the image, more where it is interpolated.
     """
 
-    def __init__(self, target: VolumeSink, grid: ImageGrid) -> None:
+    def __init__(self, target: VolumeSink, positions: int, written: int) -> None:
         self._target = target
-        self._positions, self._written = grid.kept[-1], grid.written[-1]
+        self._positions, self._written = positions, written
         self._step = POSITIONS if self._positions == self._written else self._positions
         self._open: dict[tuple[Any, ...], tuple[NDArray[np.complex64], int]] = {}
 

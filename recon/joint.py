@@ -1,0 +1,61 @@
+"""Volumes solved as one problem each: all readout positions at once, wavelets and total variation along three axes."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+from typing import Any, Protocol
+
+from recon.joint_full import FullVolumes
+from recon.joint_hybrid import HybridVolumes
+from recon.joint_problem import solve_volume, stack_maps
+from recon.preparation import Preparation, Sink
+from recon.report import SolverFigures, build_report
+from recon.scan import PlaneIndex
+from recon.settings import Settings
+
+
+class Teller(Protocol):
+    """Progress of a job."""
+
+    def __call__(self, stage: str) -> None: ...
+
+    def begin(self, groups: int) -> None: ...
+
+    def finished(self, group: PlaneIndex) -> None: ...
+
+    def iteration(self, group: PlaneIndex, settings: Settings) -> Callable[[int, float], None]: ...
+
+
+def run_joint(
+    preparation: Preparation, sink: Sink, tell: Teller, provenance: Mapping[str, Any]
+) -> dict[str, Any]:
+    """Solve every volume of a scan, one for each frame and contrast; returns the report."""
+    assert preparation.volume is not None
+    solver = SolverFigures()
+    volumes = [index for index in preparation.scan.planes() if index.slice == 0]
+    tell.begin(len(volumes))
+    maps = None if preparation.map_method is None else stack_maps(preparation, tell)
+    if preparation.volume.is_complete:
+        assert maps is not None
+        space: HybridVolumes | FullVolumes = HybridVolumes(preparation, maps)
+    else:
+        space = FullVolumes(preparation, maps)
+    for volume in volumes:
+        tell("solve")
+        if isinstance(space, FullVolumes) and maps is None:
+            space.coil_by_coil(volume, sink)
+        elif isinstance(space, FullVolumes) and preparation.settings.method == "zero-filled":
+            space.finish(volume, space.zero_filled(volume), sink)
+        else:
+            encoding, data = space.measure(volume)
+            callback = tell.iteration(volume, preparation.settings)
+            solution = solve_volume(preparation, encoding, data, callback)
+            del encoding, data
+            solver.see([volume], solution)
+            u = solution.image
+            del solution
+            tell("consistency")
+            space.finish(volume, u, sink)
+        tell("write")
+        tell.finished(volume)
+    return build_report(preparation, space.figures, solver, {} if maps is None else maps.figures, provenance)
