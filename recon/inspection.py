@@ -7,7 +7,6 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass, field
-from itertools import product
 from typing import Any, Final
 
 import numpy as np
@@ -17,6 +16,7 @@ from recon.averages import Mean, Samples
 from recon.axes import LabelledArray
 from recon.caution import CAUTION
 from recon.coverage import Coverage, coverage, coverage_facts, partial_fourier_findings
+from recon.data_findings import absence_findings, mask_findings
 from recon.errors import InvalidScan
 from recon.findings import Finding
 from recon.formats.image_layout import voxel_size_mm
@@ -30,6 +30,7 @@ from recon.sampling import (
     readout_finding,
 )
 from recon.scan import PlaneIndex, Scan, cropped_readout, readout_pattern
+from recon.scan_checks import check_finite
 from recon.spikes import SpikeCount, find_spikes
 
 #: magnitudes of k-space that single-precision arithmetic can square without harm.
@@ -219,49 +220,9 @@ class Inspector:
         return {axis: coverage(covered) for axis, covered in pairs}
 
     def _findings(self) -> list[Finding]:
-        scan, found = self.scan, []
-        if scan.mask_array is None:
-            found.append(
-                Finding(
-                    "mask-inferred",
-                    "warning",
-                    "The scan has no /mask, so positions holding only zeros count as not sampled: write /mask to be "
-                    "sure.",
-                    "/mask",
-                )
-            )
-        if scan.noise_array is None:
-            found.append(
-                Finding(
-                    "noise-missing",
-                    "warning",
-                    "The scan has no /noise, so the noise is estimated from the k-space periphery and the residual "
-                    "cannot be judged against it: add noise-only readouts.",
-                    "/noise",
-                )
-            )
-        if self.outside:
-            found.append(
-                Finding(
-                    "samples-outside-mask",
-                    "info",
-                    f"{self.outside} positions hold samples outside the mask and are ignored: intended when "
-                    f"undersampling retrospectively, else correct /mask.",
-                    "/mask",
-                    {"positions": self.outside, "planes": self.outside_planes},
-                )
-            )
-        if self.empty_positions:
-            found.append(
-                Finding(
-                    "sampled-zeros",
-                    "warning",
-                    f"{self.empty_positions} positions that the mask calls sampled hold only zeros, first in "
-                    f"{self.empty_first}: correct /mask, or leave it out to have it inferred.",
-                    "/kspace",
-                    {"positions": self.empty_positions},
-                )
-            )
+        scan = self.scan
+        found = absence_findings(scan)
+        found += mask_findings(self.outside, self.outside_planes, self.empty_positions, self.empty_first)
         found.extend(averages_finding(self.sampling))
         found.extend(readout_finding(self.sampling, scan.plane_axes))
         found.extend(partial_fourier_findings(self._coverage()))
@@ -319,23 +280,4 @@ def inspect(scan: Scan, progress: Callable[[float], None] | None = None) -> Insp
         inspector.read(index)
         if progress is not None:
             progress(done / len(planes))
-    check_finite(scan)
     return inspector.finish()
-
-
-def check_finite(scan: Scan) -> None:
-    """Raise `InvalidScan` when `/noise`, `/reference` or `/sensitivity` holds NaN or Inf (`see` looks at `/kspace`)."""
-    others = {
-        "/noise": scan.noise_array,
-        "/reference": scan.reference_array,
-        "/sensitivity": scan.sensitivity_array,
-    }
-    for name, array in others.items():
-        if array is None:
-            continue
-        sizes = array.sizes
-        for position, coil in product(range(sizes.get("slice", 1)), range(sizes.get("coil", 1))):
-            if not np.isfinite(array.take(slice=position, coil=coil).view(np.float32)).all():
-                raise InvalidScan(
-                    f"{name} contains NaN or Inf; write finite numbers in single-precision range"
-                )

@@ -18,7 +18,7 @@ from recon.errors import InvalidScan
 from recon.exclusion import Excluded, leave_out
 from recon.feasibility import check_job, needs_maps
 from recon.grid import ImageGrid, image_grid
-from recon.inspection import Inspection, Inspector, check_finite
+from recon.inspection import Inspection, Inspector
 from recon.operators.fourier import crop_readout
 from recon.scan import PlaneIndex, Scan, cropped_readout
 from recon.settings import Settings
@@ -214,7 +214,6 @@ def prepare(scan: Scan, settings: Settings, report: Report) -> Preparation:
         unit = float(1 / np.sqrt(mean_count))
         calibration = {position: each.scaled(unit) for position, each in calibration.items()}
     check_job(inspection.as_dict(), settings)
-    check_finite(scan)
     report("whiten", 0.0)
     silent = excluded.renumbered(inspection.channels["silent_in_noise"])
     whitening = estimate_whitening(scan, mean_count, scan if volume is None else volume.slabs, silent)

@@ -8,7 +8,7 @@ from dataclasses import dataclass
 from recon.coils.calibration import LARGEST_BLOCK
 from recon.feasibility import check_job
 from recon.grid import ImageGrid, image_grid
-from recon.inspection import Inspection, check_finite
+from recon.inspection import Inspection
 from recon.scan import Scan
 from recon.settings import Settings
 from recon.volume import PlaneScan, Slabs, plane_scan, read_centre, read_lines
@@ -61,7 +61,6 @@ def read_volume(scan: Scan, settings: Settings, report: Callable[[str, float], N
         report("inspect", done / len(indices) / 2)
     inspection = inspector.finish()
     check_job(inspection.as_dict(), settings)
-    check_finite(scan)
     patterns = inspector.patterns
     is_complete = all(pattern.full is None for pattern in patterns.values())
     if is_complete:
