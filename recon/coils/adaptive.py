@@ -12,27 +12,12 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.ndimage import uniform_filter
 
-from recon.coils.calibration import crop_block
-from recon.coils.eigenvector import interpolate, normalised
-from recon.operators.fourier import inverse_transform
+from recon.coils.eigenvector import normalised
+from recon.coils.grids import interpolate_directions
+from recon.coils.low_resolution import equal_blocks, low_resolution_images
 
 #: side of the averaging window, in pixels of the low-resolution grid.
 WINDOW: Final = 5
-#: the low-resolution grid is this many times the calibration block.
-GRID_FACTOR: Final = 2
-
-
-def low_resolution_images(block: NDArray[Any]) -> NDArray[Any]:
-    """Coil images of a calibration block (coil, rows, columns), Hann-weighted against ringing, twice as many pixels."""
-    _, rows, columns = block.shape
-    window = np.outer(np.hanning(rows + 2)[1:-1], np.hanning(columns + 2)[1:-1])
-    padded = np.zeros((block.shape[0], GRID_FACTOR * rows, GRID_FACTOR * columns), np.complex64)
-    crop = crop_block(padded, rows, columns)
-    first = tuple(
-        large // 2 - small // 2 for large, small in zip(padded.shape[1:], crop.shape[1:], strict=True)
-    )
-    padded[:, first[0] : first[0] + rows, first[1] : first[1] + columns] = block * window
-    return inverse_transform(padded)
 
 
 def adaptive_maps(
@@ -52,8 +37,7 @@ def adaptive_maps(
     -------
     complex64 (coil, rows, columns)
     """
-    rows, columns = (min(block.shape[axis] for block in blocks) for axis in (1, 2))
-    covariance = sum(_outer(low_resolution_images(crop_block(block, rows, columns))) for block in blocks)
+    covariance = sum(_outer(low_resolution_images(block)) for block in equal_blocks(blocks))
     assert isinstance(covariance, np.ndarray)
     window = (0, 0, WINDOW, WINDOW)
     local = uniform_filter(covariance.real, window, mode="wrap") + 1j * uniform_filter(
@@ -63,7 +47,7 @@ def adaptive_maps(
     vector = vectors[..., -1]
     phase = np.exp(-1j * np.angle(vector @ reference.conj()))
     coarse = (vector * phase[..., np.newaxis]).transpose(2, 0, 1)
-    return normalised(interpolate(coarse, shape), np.ones(shape, np.bool_))
+    return normalised(interpolate_directions(coarse, shape, reference), np.ones(shape, np.bool_))
 
 
 def _outer(images: NDArray[Any]) -> NDArray[Any]:

@@ -7,16 +7,18 @@ whatever whitening and compression did: maps found in virtual coils are carried 
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any, Final, Literal
 
 import numpy as np
 from numpy.typing import NDArray
 
-from recon.coils.adaptive import adaptive_maps, low_resolution_images
+from recon.coils.adaptive import adaptive_maps
 from recon.coils.compression import Compression
-from recon.coils.eigenvector import eigenvector_maps, nearest
+from recon.coils.eigenvector import eigenvector_maps
 from recon.coils.gathering import Calibration
+from recon.coils.grids import nearest
+from recon.coils.low_resolution import low_resolution_images, object_pixels
 from recon.coils.noise import Whitening, mix
 from recon.errors import InvalidScan
 from recon.operators.fourier import crop_centre
@@ -25,8 +27,6 @@ from recon.scan import Scan
 MapMethod = Literal["eigenvector", "adaptive", "supplied", "single-coil"]
 #: the object, for the mean that defines noise units: pixels above this fraction of the largest magnitude.
 OBJECT_LEVEL: Final = 0.1
-#: mean square of a two-dimensional Hann window, (3/8)^2.
-HANN_POWER: Final = 9 / 64
 
 
 @dataclass(frozen=True)
@@ -40,27 +40,46 @@ class MapFigures:
         Of the calibration they were computed from.
     object_share : float
         Share of the object, at the resolution of the calibration, where the maps are not zero.
+    sets : int
+        Sets of maps.
+    kernel, subspace, threshold : (int, int), int, float, or None
+        Of eigenvector maps: sides of the k-space patch, singular vectors kept, smallest eigenvalue inside the support.
+    folded_share : float or None
+        Of eigenvector maps: share of the object where the second eigenvalue is no smaller than that.
     """
 
     source: str
     block: tuple[int, int] | None = None
     object_share: float = 1.0
+    sets: int = 1
+    kernel: tuple[int, int] | None = None
+    subspace: int | None = None
+    threshold: float | None = None
+    folded_share: float | None = None
 
     def as_dict(self) -> dict[str, Any]:
         """Plain JSON form."""
-        block = None if self.block is None else {"rows": self.block[0], "columns": self.block[1]}
-        return {"source": self.source, "block": block, "object_share": self.object_share}
+        return {
+            "source": self.source,
+            "block": None if self.block is None else {"rows": self.block[0], "columns": self.block[1]},
+            "object_share": self.object_share,
+            "sets": self.sets,
+            "kernel": None if self.kernel is None else list(self.kernel),
+            "subspace": self.subspace,
+            "threshold": self.threshold,
+            "folded_share": self.folded_share,
+        }
 
 
 @dataclass(frozen=True)
 class CoilMaps:
-    """Maps of one slice.
+    """Maps of one slice: one set, or two where the object exceeds the field of view.
 
     Attributes
     ----------
-    virtual : complex64 (virtual coil, rows, columns)
-        Whitened and blocks, for an image in the object's intensity; zero outside the object.
-    whitened : complex64 (coil, rows, columns)
+    virtual : complex64 (virtual coil, rows, columns) or (set, virtual coil, rows, columns)
+        Whitened and compressed, for an image in the object's intensity; zero outside the object.
+    whitened : complex64 (coil, rows, columns) or (set, coil, rows, columns)
         The same in all whitened physical coils.
     figures : MapFigures
     """
@@ -71,8 +90,14 @@ class CoilMaps:
 
     @property
     def support(self) -> NDArray[np.bool_]:
-        """Where any map is not zero."""
-        return np.asarray(np.any(self.virtual != 0, axis=0))
+        """Where any map is not zero: (rows, columns), or (set, rows, columns)."""
+        return np.asarray(np.any(self.virtual != 0, axis=-3))
+
+    def coil_images(self, m: NDArray[Any]) -> NDArray[Any]:
+        """sum_j S_cj m_j in all whitened coils, (coil, rows, columns), of an image or one for each set."""
+        if self.whitened.ndim == 3:
+            return np.asarray(self.whitened * m)
+        return np.asarray(np.sum(self.whitened * m[:, np.newaxis], axis=0))
 
 
 class MapMaker:
@@ -86,6 +111,8 @@ class MapMaker:
     compression : Compression
     shape : (rows, columns)
         Of the plane that is solved.
+    sets : {1, 2}
+        Sets of maps wanted, of eigenvector maps alone.
     """
 
     def __init__(
@@ -95,15 +122,17 @@ class MapMaker:
         whitening: Whitening,
         compression: Compression,
         shape: tuple[int, int],
+        sets: int = 1,
     ) -> None:
         self.scan = scan
         self.method = method
         self.whitening = whitening
         self.compression = compression
         self.shape = shape
+        self.sets = sets
 
     def make(self, position: int, calibration: Calibration) -> CoilMaps:
-        """Maps of one slice.
+        """Maps of one slice; a second set that would be zero everywhere is left out.
 
         Parameters
         ----------
@@ -121,27 +150,47 @@ class MapMaker:
         if self.method == "supplied":
             return self._supplied(position, calibration, blocks)
         if self.method == "single-coil":
-            virtual = np.ones((1, *self.shape), np.complex64)
-        elif self.method == "adaptive":
-            virtual = adaptive_maps(blocks, self.shape, self.compression.reference)
+            return self._scaled(np.ones((1, 1, *self.shape), np.complex64), MapFigures("none"))
+        figures = MapFigures(calibration.source, calibration.sides)
+        if self.method == "adaptive":
+            sets = adaptive_maps(blocks, self.shape, self.compression.reference)[np.newaxis]
         else:
-            virtual, _ = eigenvector_maps(
+            found = eigenvector_maps(
                 blocks,
                 self.shape,
                 self.compression.reference,
                 # the noise of a separate calibration is not that of the scan
                 has_noise_units=self.whitening.has_noise_units and calibration.source != "reference",
+                sets=self.sets,
             )
-        whitened = self.compression.expand(virtual)
-        scale = _inverse_size(mix(self.whitening.unwhitener, whitened))
-        if self.method == "single-coil":
-            figures = MapFigures("none")
-        else:
-            share = self._object_share(calibration, blocks, np.any(virtual != 0, axis=0))
-            figures = MapFigures(calibration.source, calibration.sides, share)
-        return CoilMaps(
-            np.asarray(virtual * scale, np.complex64), np.asarray(whitened * scale, np.complex64), figures
-        )
+            sets = found.sets[:1] if not found.sets[-1].any() else found.sets
+            is_folded = found.eigenvalues[1] >= found.threshold
+            figures = replace(
+                figures,
+                kernel=found.kernel,
+                subspace=found.subspace,
+                threshold=found.threshold,
+                folded_share=self._share_of_object(blocks, is_folded),
+            )
+        share = self._object_share(calibration, blocks, np.any(sets != 0, axis=(0, 1)))
+        return self._scaled(sets, replace(figures, object_share=share, sets=len(sets)))
+
+    def _scaled(self, sets: NDArray[np.complex64], figures: MapFigures) -> CoilMaps:
+        """Bring maps in virtual coils (set, virtual coil, rows, columns) to one in physical coils, each set alone."""
+        virtual, whitened = [], []
+        for maps in sets:
+            expanded = self.compression.expand(maps)
+            scale = _inverse_size(mix(self.whitening.unwhitener, expanded))
+            virtual.append(np.asarray(maps * scale, np.complex64))
+            whitened.append(np.asarray(expanded * scale, np.complex64))
+        if len(sets) == 1:
+            return CoilMaps(virtual[0], whitened[0], figures)
+        return CoilMaps(np.stack(virtual), np.stack(whitened), figures)
+
+    def _share_of_object(self, blocks: list[NDArray[Any]], where: NDArray[np.bool_]) -> float:
+        is_object = object_pixels(blocks, OBJECT_LEVEL, has_noise_units=self.whitening.has_noise_units)
+        covered = nearest(where, is_object.shape)[is_object]
+        return float(covered.mean()) if covered.size else 1.0
 
     def _object_share(
         self, calibration: Calibration, blocks: list[NDArray[Any]], inside: NDArray[np.bool_]
@@ -149,7 +198,7 @@ class MapMaker:
         # gaps in the calibration would show the object where it is not
         if inside.all() or not calibration.is_full:
             return 1.0
-        return _object_share(blocks, inside, self.whitening.has_noise_units)
+        return self._share_of_object(blocks, inside)
 
     def _supplied(self, position: int, calibration: Calibration, blocks: list[NDArray[Any]]) -> CoilMaps:
         physical = self.scan.sensitivity(position)
@@ -169,22 +218,6 @@ class MapMaker:
         return CoilMaps(
             self.compression.apply(whitened), whitened, MapFigures("supplied", object_share=share)
         )
-
-
-def _object_share(blocks: list[NDArray[Any]], inside: NDArray[np.bool_], has_noise_units: bool) -> float:
-    """Share of the object's low-resolution pixels, those well above the noise, that lie inside (1 without any)."""
-    total = within = 0
-    for block in blocks:
-        images = low_resolution_images(block)
-        power = np.asarray(np.sum(np.abs(images) ** 2, axis=0, dtype=np.float64))
-        # a Hann-weighted block spreads unit noise over a grid of more pixels than it has samples
-        noise = len(block) * HANN_POWER * block[0].size / power.size if has_noise_units else 0.0
-        # the sum over C coils of noise alone has a standard deviation of 1/sqrt(C) of its mean
-        limit = max(noise * (1 + 4 / np.sqrt(len(block))), OBJECT_LEVEL**2 * float(power.max()))
-        is_object = power > limit
-        total += int(is_object.sum())
-        within += int((is_object & nearest(inside, is_object.shape)).sum())
-    return within / total if total > 0 else 1.0
 
 
 def _inverse_size(maps: NDArray[Any]) -> NDArray[np.float32]:

@@ -13,7 +13,8 @@ from recon.coils.adaptive import adaptive_maps
 from recon.coils.calibration import central_block, check_block
 from recon.coils.combination import root_sum_of_squares, sensitivity_weighted
 from recon.coils.compression import Compression
-from recon.coils.eigenvector import eigenvector_maps, interpolate
+from recon.coils.eigenvector import EigenvectorMaps, eigenvector_maps
+from recon.coils.grids import interpolate
 from recon.coils.noise import whitening_from
 from recon.errors import CalibrationMissing, InvalidSettings
 from recon.phantom import Ellipse, SmoothMap, ellipse_kspace, rasterise, ring_coils, wave_phase
@@ -36,6 +37,11 @@ def calibration(coils: int, side: int, noise: float = 0.0) -> tuple[Array, list[
     top, left = 32 - side // 2, 30 - side // 2
     block = kspace[:, top : top + side, left : left + side]
     return block + noise * complex_normal(np.random.default_rng(0), block.shape), maps
+
+
+def first(found: EigenvectorMaps) -> tuple[Array, Array]:
+    """Return the first set of maps and its eigenvalue."""
+    return found.sets[0], found.eigenvalues[0]
 
 
 def alignment(found: Array, true: Array) -> Array:
@@ -77,7 +83,7 @@ def test_eigenvalue_is_one_inside_the_object_and_maps_are_the_true_ones(coils: i
     """Source: Uecker et al. 2014: the true maps are eigenvectors to eigenvalue one where there is signal."""
     block, true = calibration(coils, side, noise=1e-3)
     reference = np.ones(coils) / math.sqrt(coils)
-    maps, eigenvalue = eigenvector_maps([block], (64, 60), reference, has_noise_units=False)
+    maps, eigenvalue = first(eigenvector_maps([block], (64, 60), reference, has_noise_units=False))
     inside = rasterise([Ellipse(1, (0.02, -0.03), (0.66, 0.76), 10)], (64, 60)).real > 0
     outside = rasterise([Ellipse(1, (0.02, -0.03), (0.95, 1.05), 10)], (64, 60)).real == 0
     assert eigenvalue[inside].min() > 0.97
@@ -107,7 +113,7 @@ def test_maps_of_a_point_symmetric_scan_are_point_symmetric(shape: tuple[int, in
     kspace = ellipse_kspace([Ellipse(1.0, (0, 0), (0.6, 0.7), 20)], (65, 65), maps=coils)[:, 22:43, 22:43]
     gram = kspace.reshape(6, -1) @ kspace.reshape(6, -1).conj().T
     reference = Compression(gram, None, has_noise_units=False).reference
-    maps, eigenvalue = eigenvector_maps([kspace], shape, reference, has_noise_units=False)
+    maps, eigenvalue = first(eigenvector_maps([kspace], shape, reference, has_noise_units=False))
     np.testing.assert_allclose(eigenvalue, eigenvalue[::-1, ::-1], atol=2e-3)
     inside = rasterise([Ellipse(1, (0, 0), (0.55, 0.65), 20)], shape).real > 0
     reflected = np.roll(maps, 3, axis=0)[:, ::-1, ::-1]  # a coil's opposite is three places on
@@ -123,7 +129,7 @@ def test_maps_have_the_references_phase_and_are_deterministic(method: str) -> No
     def make() -> Array:
         if method == "adaptive":
             return adaptive_maps([block], (64, 60), reference)
-        return eigenvector_maps([block], (64, 60), reference, has_noise_units=False)[0]
+        return first(eigenvector_maps([block], (64, 60), reference, has_noise_units=False))[0]
 
     maps = make()
     assert maps.tobytes() == make().tobytes()
@@ -132,6 +138,39 @@ def test_maps_have_the_references_phase_and_are_deterministic(method: str) -> No
     strong = inside & (np.abs(along) > 0.2)
     assert strong.mean() > 0.2
     assert np.abs(np.angle(along[strong])).max() < 0.1
+
+
+@pytest.mark.parametrize("method", ["eigenvector", "adaptive"])
+def test_maps_are_right_also_where_the_phase_reference_vanishes(method: str) -> None:
+    """A reference orthogonal to the true maps at a point: about it phases turn by 2 pi, but directions do not."""
+    block, true = calibration(8, 24)
+    shape = (128, 120)
+    on_grid = np.stack([m.on_grid(shape) for m in true])
+    place = 71, 55
+    there, start = on_grid[:, place[0], place[1]], np.ones(8, np.complex128)
+    reference = start - there * np.vdot(there, start) / np.vdot(there, there)
+    if method == "adaptive":
+        maps = adaptive_maps([block], shape, reference)
+    else:
+        maps, _ = first(eigenvector_maps([block], shape, reference, has_noise_units=False))
+    about = np.s_[place[0] - 8 : place[0] + 9, place[1] - 8 : place[1] + 9]
+    assert alignment(maps, on_grid)[about].min() > (0.999 if method == "eigenvector" else 0.99)
+    along = np.tensordot(reference.conj(), maps, axes=1)[about]
+    assert along.real.min() > -1e-3
+    assert np.abs(along).min() < 0.1
+
+
+@pytest.mark.parametrize("noise", [1e-3, 3e-2, 0.3])
+def test_support_holds_the_object_and_little_else(noise: float) -> None:
+    """The subspace is what noise cannot explain, and the smallest eigenvalue kept follows the data."""
+    block, _ = calibration(8, 24, noise=noise)
+    found = eigenvector_maps([block / noise], (64, 60), np.ones(8) / math.sqrt(8), has_noise_units=True)
+    support = np.any(found.sets[0] != 0, axis=0)
+    inside = rasterise([Ellipse(1, (0.02, -0.03), (0.68, 0.78), 10)], (64, 60)).real > 0.5
+    beyond = rasterise([Ellipse(1, (0.02, -0.03), (0.86, 0.95), 10)], (64, 60)).real == 0
+    assert support[inside].mean() > 0.999
+    assert support[beyond].mean() < 0.15
+    assert 0.85 <= found.threshold <= 0.995
 
 
 def test_adaptive_maps_follow_the_true_ones() -> None:
@@ -147,8 +186,8 @@ def test_adaptive_maps_follow_the_true_ones() -> None:
 def test_maps_do_not_depend_on_the_scale_of_the_data() -> None:
     block, _ = calibration(4, 20)
     reference = np.ones(4) / 2
-    one, _ = eigenvector_maps([block], (64, 60), reference, has_noise_units=False)
-    other, _ = eigenvector_maps([1000 * block], (64, 60), reference, has_noise_units=False)
+    one, _ = first(eigenvector_maps([block], (64, 60), reference, has_noise_units=False))
+    other, _ = first(eigenvector_maps([1000 * block], (64, 60), reference, has_noise_units=False))
     np.testing.assert_allclose(one, other, atol=1e-4)
 
 
