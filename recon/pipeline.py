@@ -172,7 +172,8 @@ def _sink(preparation: Preparation, target: _Memory | ImageWriter) -> Sink:
     grid = preparation.image_grid
     # a volume solved in k-space is brought to its grid as a whole
     positions = grid.kept[-1] if preparation.volume.is_complete else grid.written[-1]
-    return PositionSink(target, positions, grid.written[-1])
+    is_magnitude = preparation.settings.combination == "root-sum-of-squares"
+    return PositionSink(target, positions, grid.written[-1], is_magnitude=is_magnitude)
 
 
 def _run(

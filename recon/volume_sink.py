@@ -36,11 +36,16 @@ class PositionSink:
         Readout positions that come.
     written : int
         Readout positions of the image, more where it is interpolated.
+    is_magnitude : bool
+        Whether the image holds magnitudes, which interpolation must leave so.
     """
 
-    def __init__(self, target: VolumeSink, positions: int, written: int) -> None:
+    def __init__(
+        self, target: VolumeSink, positions: int, written: int, *, is_magnitude: bool = False
+    ) -> None:
         self._target = target
         self._positions, self._written = positions, written
+        self._is_magnitude = is_magnitude
         self._step = POSITIONS if self._positions == self._written else self._positions
         self._open: dict[tuple[Any, ...], tuple[NDArray[np.complex64], int]] = {}
 
@@ -60,4 +65,6 @@ class PositionSink:
             self._target.write_positions(name, volume, slice(start, start + width), part)
         else:
             finer = zero_fill(part, (self._written,))
+            if self._is_magnitude and name == "image":
+                finer = np.abs(finer).astype(np.complex64)
             self._target.write_positions(name, volume, slice(0, self._written), finer)

@@ -22,6 +22,7 @@ from recon.scan import Scan
 from recon.settings import Settings, parse_settings
 from tests.recon.helpers import complex_normal
 from tests.recon.scans import example
+from tests.recon.volumes import volume
 
 
 def with_attributes(scan: Scan, **attributes: Any) -> Scan:
@@ -119,6 +120,23 @@ def test_phase_phase_planes_crop_ky_alone() -> None:
     grid = image_grid(scan)
     assert (grid.axes, grid.kept, grid.written) == (("z", "y"), (20, 20), (20, 20))
     assert [grid.share(axis) for axis in "xyz"] == [1.0, pytest.approx(2 / 3), 1.0]
+
+
+@pytest.mark.parametrize("kind", ["planes", "joint"])
+def test_volumes_are_cropped_and_interpolated(kind: str) -> None:
+    """Phase oversampling is that of ky; every second voxel of a doubled matrix is the coarse one's, a magnitude."""
+    scan = volume((12, 14, 10)).scan
+    settings = parse_settings({"combination": "root-sum-of-squares", "volume": kind, "max_iterations": 3})
+    whole = reconstruct(scan, settings).image
+    attributes = {"phase_oversampling": 1.25, "reconstructed_matrix": [20, 22, 24]}
+    np.testing.assert_array_equal(
+        reconstruct(with_attributes(scan, phase_oversampling=1.25), settings).image, whole[:, 2:13]
+    )
+    fine = reconstruct(with_attributes(scan, **attributes), settings).image
+    assert fine.shape == (24, 22, 20)
+    np.testing.assert_allclose(fine[::2, 1::2, ::2], whole[:, 2:13], atol=1e-5)
+    assert fine.real.min() >= 0
+    assert not fine.imag.any()
 
 
 @pytest.mark.parametrize("matrix", [[43, 48, 1], [44, 47, 1], [44, 48, 2], [44, 200, 1], [44, 48, 0]])
