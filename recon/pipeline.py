@@ -26,6 +26,7 @@ from recon.errors import InvalidScan
 from recon.formats import ImageWriter, open_scan
 from recon.grid import image_grid
 from recon.joint import run_joint
+from recon.memory import check_memory
 from recon.parallel import in_order
 from recon.plane import PlaneResult, reconstruct_together
 from recon.preparation import Plane, Preparation, Sink, prepare
@@ -71,6 +72,7 @@ def reconstruct(
     progress: Progress | None = None,
     provenance: Mapping[str, Any] | None = None,
     threads: int = 1,
+    memory_limit_bytes: int | None = None,
 ) -> Reconstruction:
     """Reconstruct a scan in memory.
 
@@ -88,6 +90,8 @@ def reconstruct(
         Put into the report as it is.
     threads : int
         Planes (or series) worked on at once; the result does not depend on it.
+    memory_limit_bytes : int, optional
+        What will not fit is refused before its k-space is read; without a limit nothing is.
 
     Returns
     -------
@@ -100,6 +104,7 @@ def reconstruct(
     """
     memory = _Memory(scan)
     tell = _Teller(progress)
+    check_memory(scan, settings or Settings(), memory_limit_bytes, threads=threads)
     with _one_thread_for_each_plane():
         preparation = prepare(scan, settings or Settings(), tell.preparing)
         report = _run(preparation, _sink(preparation, memory), tell, provenance or {}, threads)
@@ -116,6 +121,7 @@ def reconstruct_file(
     progress: Progress | None = None,
     provenance: Mapping[str, Any] | None = None,
     threads: int = 1,
+    memory_limit_bytes: int | None = None,
 ) -> dict[str, Any]:
     """Reconstruct a scan file into an image file, see `reconstruct`.
 
@@ -134,6 +140,7 @@ def reconstruct_file(
         raise InvalidScan(f"the image would overwrite the scan {Path(scan_path).name}; give it another path")
     tell = _Teller(progress)
     with _one_thread_for_each_plane(), open_scan(scan_path) as scan:
+        check_memory(scan, settings or Settings(), memory_limit_bytes, threads=threads)
         preparation = prepare(scan, settings or Settings(), tell.preparing)
         with ImageWriter(image_path, scan, preparation.image_grid) as writer:
             report = _run(preparation, _sink(preparation, writer), tell, provenance or {}, threads)

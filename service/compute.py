@@ -58,6 +58,7 @@ def compute(order: dict[str, Any], teller: Teller) -> None:
     # Imported here, so that a failure to import is told like any other.
     from recon.pipeline import reconstruct_file
     from recon.settings import parse_settings
+    from service.memory import memory_limit
     from service.pictures import result_png
     from service.provenance import add_duration, collect
     from service.settings import computing_threads
@@ -74,6 +75,7 @@ def compute(order: dict[str, Any], teller: Teller) -> None:
         progress=teller.progress,
         provenance=provenance,
         threads=computing_threads(),
+        memory_limit_bytes=memory_limit(),
     )
     add_duration(folder / IMAGE, report, time.monotonic() - started)
     (folder / REPORT).write_text(json.dumps(report, ensure_ascii=False, allow_nan=False), encoding="utf-8")

@@ -17,6 +17,7 @@ from typing import Any
 
 from recon.pipeline import reconstruct_file
 from recon.settings import parse_settings
+from service.memory import memory_limit
 from service.pictures import result_png
 from service.progress import ProgressLine
 from service.provenance import add_duration, collect
@@ -64,6 +65,7 @@ def reconstruct_to_files(
                 progress=line.update,
                 provenance=collect(sha256, checked),
                 threads=computing_threads(),
+                memory_limit_bytes=memory_limit(),
             )
         add_duration(scratch[image], found, time.monotonic() - started)
         if report is not None:
