@@ -30,6 +30,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from recon import kernels
+from recon.operators import filters
 from recon.operators.base import inner, norm
 from recon.operators.encoding import Encoding
 from recon.operators.wavelet import Wavelet
@@ -277,9 +278,9 @@ class _Iteration:
         if self.encoding.depth == "series":
             slabs = len(real)  # each frame has its own approximation
         levels = self.transform.levels, self.transform.slab_levels
-        kernels.analyse(real, low, high, *levels)
+        filters.analyse(real, low, high, *levels)
         size = kernels.shrink(real, self.real(self.wavelet_strength / self.lipschitz), (slabs, rows, columns))
-        kernels.synthesise(real, low, high, *levels)
+        filters.synthesise(real, low, high, *levels)
         return self.wavelet_strength * size
 
     def _normal(self, x: NDArray[Any]) -> NDArray[Any]:

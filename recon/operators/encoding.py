@@ -69,7 +69,9 @@ class Encoding(LinearOperator):
         self._weight = weight[..., :1] if has_complete_readouts else weight
         # A shift of the image multiplies k-space by a phase, which the mask leaves alone: so the normal operator
         # needs no shifts of the image, only the mask (the squared weights) in the order of the plain FFT.
-        plain = np.fft.ifftshift(self._weight**2, axes=self.axes)
+        # It holds the scale of the inverse transform as well.
+        count = np.prod([self.domain_shape[axis] for axis in self.axes])
+        plain = np.fft.ifftshift(self._weight**2, axes=self.axes) / real.type(count)
         self._plain_mask = np.ascontiguousarray(plain if not is_plane else plain[np.newaxis])
         self._deep_maps = self.maps[:, np.newaxis] if is_plane else self.maps
         outside = ~np.any(maps != 0, axis=0)
@@ -112,7 +114,7 @@ class Encoding(LinearOperator):
         masks = np.broadcast_to(self._plain_mask, (len(deep), *self._plain_mask.shape[1:]))
         for frame, mask, total in zip(deep, masks, sums, strict=True):
             for map_ in self._deep_maps:
-                self._add_coil(map_[0], frame, mask, total)
+                self._add_coil(map_[0], frame, mask[np.newaxis], total)
         return out
 
     def _add_coil(self, map_: NDArray[Any], x: NDArray[Any], mask: NDArray[Any], out: NDArray[Any]) -> None:
@@ -120,8 +122,8 @@ class Encoding(LinearOperator):
         weighted = np.empty_like(x)
         kernels.weigh(_real(map_), _real(x), _real(weighted))
         spectrum = scipy.fft.fftn(weighted, axes=self.axes, overwrite_x=True)
-        spectrum *= mask
-        image = scipy.fft.ifftn(spectrum, axes=self.axes, overwrite_x=True)
+        kernels.scale(spectrum.reshape(-1, *x.shape[-2:]).view(mask.dtype), mask)
+        image = scipy.fft.ifftn(spectrum, axes=self.axes, norm="forward", overwrite_x=True)
         kernels.add_conjugate(_real(map_), _real(image), _real(out))
 
     def squared_norm_bound(self) -> float:

@@ -13,7 +13,7 @@ import numpy as np
 import pywt
 from numpy.typing import NDArray
 
-from recon import kernels
+from recon.operators import filters
 from recon.operators.base import LinearOperator
 
 MOST_LEVELS: Final = 4
@@ -60,13 +60,13 @@ class Wavelet(LinearOperator):
     def forward(self, x: NDArray[Any]) -> NDArray[Any]:
         """Coefficients of a padded image, approximation in the leading corner."""
         out = np.array(x, order="C")
-        kernels.analyse(_deep(out), *self.filters(out.dtype), self.levels, self.slab_levels)
+        filters.analyse(_deep(out), *self.filters(out.dtype), self.levels, self.slab_levels)
         return out
 
     def adjoint(self, y: NDArray[Any]) -> NDArray[Any]:
         """Padded image of coefficients: the transform is orthogonal, so the adjoint is the inverse."""
         out = np.array(y, order="C")
-        kernels.synthesise(_deep(out), *self.filters(out.dtype), self.levels, self.slab_levels)
+        filters.synthesise(_deep(out), *self.filters(out.dtype), self.levels, self.slab_levels)
         return out
 
 

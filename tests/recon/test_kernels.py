@@ -9,6 +9,7 @@ import pytest
 import pywt
 
 from recon import kernels
+from recon.operators import filters
 from recon.operators.differences import Differences
 from recon.penalties import TotalVariation, project_ball, soft_threshold
 from tests.recon.helpers import Array, complex_normal
@@ -145,14 +146,14 @@ def test_wavelet_loops_equal_pywavelets(name: str, dtype: Any) -> None:
     x = complex_normal(np.random.default_rng(5), (2, 32, 40), dtype)
     low, high = (np.array(f, x.real.dtype) for f in (wavelet.dec_lo, wavelet.dec_hi))
     out = x.copy()
-    kernels.analyse(reals(out), low, high, 1, 0)
+    filters.analyse(reals(out), low, high, 1, 0)
     for slab, found in zip(x, out, strict=True):
         approximation, (horizontal, vertical, diagonal) = pywt.dwt2(slab, wavelet, mode="periodization")
         np.testing.assert_allclose(found[:16, :20], approximation, atol=10 * limit(dtype))
         np.testing.assert_allclose(found[16:, :20], horizontal, atol=10 * limit(dtype))
         np.testing.assert_allclose(found[:16, 20:], vertical, atol=10 * limit(dtype))
         np.testing.assert_allclose(found[16:, 20:], diagonal, atol=10 * limit(dtype))
-    kernels.synthesise(reals(out), low, high, 1, 0)
+    filters.synthesise(reals(out), low, high, 1, 0)
     np.testing.assert_allclose(out, x, atol=10 * limit(dtype))
 
 
@@ -188,3 +189,14 @@ def test_complex_products(dtype: Any) -> None:
     total = y.copy()
     kernels.add_conjugate(reals(a), reals(x), reals(total))
     np.testing.assert_allclose(total, y + a.conj() * x, atol=limit(dtype))
+
+
+@pytest.mark.parametrize("dtype", DTYPES)
+@pytest.mark.parametrize("columns", [1, 5])
+def test_scale_is_a_product_with_real_numbers(dtype: Any, columns: int) -> None:
+    rng = np.random.default_rng(8)
+    x = complex_normal(rng, (2, 6, 5), dtype)
+    factor = rng.integers(0, 3, (2, 6, columns)).astype(x.real.dtype)
+    expected = x * factor
+    kernels.scale(reals(x), factor)
+    np.testing.assert_allclose(x, expected, atol=limit(dtype))
