@@ -17,7 +17,7 @@ from recon.formats import open_scan, write_scan
 from recon.inspection import inspect
 from recon.operators.encoding import Encoding
 from recon.pipeline import reconstruct
-from recon.preparation import prepare
+from recon.preparation import Preparation, prepare
 from recon.scan import PlaneIndex, Scan
 from recon.settings import Settings, parse_settings
 from tests.recon.helpers import Array, coil_maps, complex_normal
@@ -155,7 +155,9 @@ def test_frames_of_unequal_averages_are_solved_together() -> None:
             np.stack([np.asarray(scan.kspace_array.data)] * 2), ("frame", *scan.kspace_array.labels)
         ),
     )
-    settings = parse_settings({"wavelet_strength": 0.05, "tv_strength": 0.05})
+    settings = parse_settings(
+        {"wavelet_strength": 0.05, "tv_strength": 0.05, "coil_maps": "adaptive", "coil_compression": None}
+    )
     alone = reconstruct(scan, settings).image
     joint = reconstruct(twice, settings.model_copy(update={"temporal_strength": 0.2})).image
     assert np.linalg.norm(joint - alone) < 0.01 * np.linalg.norm(alone)
@@ -247,3 +249,16 @@ def test_average_that_measured_nothing_is_left_out() -> None:
         "most": 3,
         "mean": (16 * 3 + 16) / 32,
     }
+
+
+def test_weights_pay_where_counts_differ(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Every fourth line measured sixteen times among lines measured once: noise of equal weight would spoil them."""
+    masks = np.zeros((16, 48), np.bool_)
+    masks[0] = np.arange(48) % 4 != 3
+    masks[:, ::4] = masks[:, 16:32] = True
+    scan, _, found = repeated(masks, noise=0.4)
+    settings = parse_settings({"wavelet_strength": 0.2, "tv_strength": 0.2})
+    weighted = error(reconstruct(scan, settings).image, found)
+    load = Preparation.load
+    monkeypatch.setattr(Preparation, "load", lambda self, index: load(self, index)._replace(weights=None))
+    assert weighted < 0.6 * error(reconstruct(scan, settings).image, found)
