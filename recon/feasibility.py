@@ -60,7 +60,7 @@ def check_job(facts: Mapping[str, Any], settings: Settings) -> None:
         return
     if not needs_maps(settings, coils):
         return
-    matrix = tuple(facts["image"]["solved_plane"])
+    matrix = tuple(facts["image"].get("solved_plane") or facts["image"]["matrix"])
     if facts["objects"]["reference"] is not None:
         rows, columns = facts["objects"]["reference"]
         check_block(rows, columns, (matrix[0], matrix[1]), "/reference")
