@@ -15,7 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from recon.axes import OUTER_AXES
-from recon.coils.combination import sensitivity_weighted
+from recon.coils.combination import coil_images, sensitivity_weighted
 from recon.coils.noise import Whitening, mix
 from recon.operators.fourier import inverse_transform, transform
 from recon.scan import PlaneIndex
@@ -33,18 +33,21 @@ def residual(
 
     Parameters
     ----------
-    image : complex (rows, columns)
+    image : complex (rows, columns) or (set, rows, columns)
         m, in the object's intensity.
-    whitened_maps, kspace : complex (coil, rows, columns)
+    whitened_maps : complex (coil, rows, columns) or (set, coil, rows, columns)
+    kspace : complex (coil, rows, columns)
     mask : bool (rows, columns)
     """
-    predicted = transform(whitened_maps * image)
-    return np.where(mask, kspace - predicted, 0)
+    return np.where(mask, kspace - transform(coil_images(image, whitened_maps)), 0)
 
 
 def residual_image(residuals: NDArray[Any], whitened_maps: NDArray[Any]) -> NDArray[Any]:
-    """Sensitivity-weighted inverse transform of the residual, in the image's units (rows, columns)."""
-    return sensitivity_weighted(inverse_transform(residuals), whitened_maps)
+    """Sensitivity-weighted inverse transform of the residual, in the image's units: (rows, columns), after any set."""
+    images = inverse_transform(residuals)
+    if whitened_maps.ndim == 3:
+        return sensitivity_weighted(images, whitened_maps)
+    return np.stack([sensitivity_weighted(images, maps) for maps in whitened_maps])
 
 
 class ResidualFigures:

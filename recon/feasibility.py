@@ -41,6 +41,8 @@ def check_job(facts: Mapping[str, Any], settings: Settings) -> None:
             ]
         )
     has_maps = bool(facts["objects"]["sensitivity"])
+    if settings.map_sets > 1:
+        _check_map_sets(facts, settings)
     if settings.coil_maps == "supplied" and not has_maps:
         raise InvalidSettings(
             [
@@ -99,6 +101,43 @@ def _check_volume(facts: Mapping[str, Any], settings: Settings) -> None:
             "/volume",
             "received planes, but the mask varies along kx, so that readouts cannot be transformed on their own; "
             "choose joint, or a mask that is constant along kx",
+        )
+
+
+def _check_map_sets(facts: Mapping[str, Any], settings: Settings) -> None:
+    """Two sets are those of eigenvector maps, and solved plane by plane."""
+    axes = facts["axes"]
+    is_supplied = settings.coil_maps == "auto" and bool(facts["objects"]["sensitivity"])
+    if int(axes.get("coil", 1)) == 1 or is_supplied or settings.coil_maps not in ("auto", "eigenvector"):
+        what = (
+            "one coil"
+            if int(axes.get("coil", 1)) == 1
+            else "supplied maps"
+            if is_supplied
+            else settings.coil_maps
+        )
+        _refuse(
+            "/map_sets",
+            f"received 2 with {what}; accepted is 2 with eigenvector maps of several coils: set coil_maps to "
+            f"eigenvector, or map_sets to 1",
+        )
+    if not needs_maps(settings, int(axes.get("coil", 1))):
+        _refuse(
+            "/map_sets",
+            "received 2 for images combined coil by coil, which need no maps; accepted is 1: choose the combination "
+            "sensitivity for two sets",
+        )
+    for name in ("temporal_strength", "low_rank_strength"):
+        if axes.get("frame", 1) > 1 and getattr(settings, name) != 0:
+            _refuse(
+                "/map_sets",
+                f"received 2 with {name} {getattr(settings, name)}; accepted is 2 where frames are solved one by one: "
+                f"set {name} to 0, or map_sets to 1",
+            )
+    if settings.volume == "joint":
+        _refuse(
+            "/map_sets",
+            "received 2 with the volume joint; accepted is 2 where planes are solved one by one: set volume to planes",
         )
 
 

@@ -47,7 +47,7 @@ def zero_filled(encoding: Encoding, kspace: NDArray[Any], mask: NDArray[np.bool_
     mask : bool (rows, columns)
     """
     weighted = encoding.adjoint(encoding.to_range(kspace * density_weights(mask)))
-    power = np.sum(np.abs(encoding.maps) ** 2, axis=0)
+    power = encoding.power()
     return np.asarray(np.divide(weighted, power, out=np.zeros_like(weighted), where=power > 0))
 
 

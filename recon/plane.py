@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from recon import consistency
-from recon.coils.combination import root_sum_of_squares
+from recon.coils.combination import coil_images, combine_sets, root_sum_of_squares
 from recon.coils.maps import CoilMaps
 from recon.coils.noise import mix
 from recon.linear import density_weights, tikhonov, zero_filled
@@ -117,10 +117,12 @@ def finish_plane(
     written = preparation.grid.apply
     if preparation.settings.combination == "root-sum-of-squares":
         # magnitudes are taken last: interpolated ones would fall below zero
-        image = root_sum_of_squares(written(mix(preparation.whitening.unwhitener, maps.whitened * m)))
+        image = root_sum_of_squares(
+            written(mix(preparation.whitening.unwhitener, coil_images(m, maps.whitened)))
+        )
     else:
-        image = written(m)
-    return PlaneResult(image, written(difference), residuals, solution)
+        image = combine_sets(written(m))
+    return PlaneResult(image, combine_sets(written(difference)), residuals, solution)
 
 
 def _coil_by_coil(preparation: Preparation, plane: Plane) -> PlaneResult:

@@ -130,7 +130,9 @@ class Preparation:
         """Coil maps of one slice."""
         assert self.map_method is not None
         compression = self.compression_of(position)
-        maker = MapMaker(self.scan, self.map_method, self.whitening, compression, self.shape)
+        maker = MapMaker(
+            self.scan, self.map_method, self.whitening, compression, self.shape, self.settings.map_sets
+        )
         return maker.make(position, self.calibration[position])
 
     def load(self, index: PlaneIndex) -> Plane:

@@ -9,6 +9,7 @@ from numpy.typing import NDArray
 
 from recon.coils.maps import CoilMaps
 from recon.operators.encoding import Encoding
+from recon.operators.folded import FoldedEncoding
 from recon.preparation import Plane, Preparation
 from recon.solver import Problem
 
@@ -22,7 +23,7 @@ def measurement(
     ----------
     preparation : Preparation
     maps : CoilMaps
-        Shared by the planes.
+        Shared by the planes; of two sets only with a single plane.
     planes : list of Plane
         Whitened samples of all coils; more than one is a series.
 
@@ -33,6 +34,10 @@ def measurement(
         In the range of `encoding`.
     """
     scaled = maps.virtual / np.float32(preparation.kappa)
+    if maps.virtual.ndim == 4:
+        ((samples, mask, weights, position),) = planes
+        folded = FoldedEncoding(scaled, mask, weights)
+        return folded, folded.to_range(preparation.compression_of(position).apply(samples))
     virtual = [preparation.compression_of(plane.position).apply(plane.kspace) for plane in planes]
     if len(planes) == 1:
         encoding = Encoding(scaled, planes[0].mask, weights=planes[0].weights)

@@ -6,7 +6,7 @@ from collections.abc import Mapping
 from typing import Any, Final
 
 from recon.caution import CAUTION
-from recon.coils.findings import map_findings, noise_findings
+from recon.coils.findings import idle_set_findings, map_findings, noise_findings
 from recon.coils.maps import MapFigures
 from recon.consistency import ResidualFigures
 from recon.findings import Finding
@@ -134,6 +134,7 @@ def build_report(
         *inspection.findings,
         *noise_findings(preparation.whitening, scan.noise_attributes, scan.attributes),
         *map_findings(map_figures, "slice" if preparation.volume is None else "x"),
+        *idle_set_findings(map_figures, preparation.settings.map_sets),
         *solver.findings(preparation),
         *preparation.excluded.findings(),
         *least_squares_findings(preparation.settings, float(inspection.sampling["sampled_fraction"])),

@@ -117,6 +117,9 @@ class Settings(BaseModel):
         One of `WAVELETS`.
     coil_maps : {"auto", "eigenvector", "adaptive", "supplied"}
         `auto`: the supplied maps when the scan holds `/sensitivity`, else eigenvector maps.
+    map_sets : {1, 2}
+        Sets of eigenvector maps, and images: two where the object exceeds the field of view and folds onto itself. The
+        image written is sqrt(|m_1|^2 + |m_2|^2) with the phase of the first.
     coil_compression : "auto", {"keep_energy": f}, {"coils": n} or null
     combination : {"sensitivity", "root-sum-of-squares"}
         Of iterative methods the latter is the magnitude sqrt(sum_c |S_c m|^2), which is |m|; of `zero-filled`, the coil
@@ -145,6 +148,7 @@ class Settings(BaseModel):
         "db4"
     )
     coil_maps: Literal["auto", "eigenvector", "adaptive", "supplied"] = "auto"
+    map_sets: int = Field(default=1, ge=1, le=2, strict=True)
     coil_compression: Annotated[
         Literal["auto"] | KeepEnergy | KeepCoils | None, BeforeValidator(_compression)
     ] = "auto"

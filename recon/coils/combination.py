@@ -28,3 +28,30 @@ def sensitivity_weighted(images: NDArray[Any], maps: NDArray[Any]) -> NDArray[An
 def root_sum_of_squares(images: NDArray[Any]) -> NDArray[Any]:
     """sqrt(sum_c |m_c|^2), real-valued magnitude in the images' complex dtype (Roemer et al. 1990)."""
     return np.asarray(np.sqrt(np.sum(np.abs(images) ** 2, axis=0)), images.dtype)
+
+
+def coil_images(image: NDArray[Any], maps: NDArray[Any]) -> NDArray[Any]:
+    """S_c m, or sum_j S_cj m_j, (coil, rows, columns).
+
+    Parameters
+    ----------
+    image : complex (rows, columns) or (set, rows, columns)
+    maps : complex (coil, rows, columns) or (set, coil, rows, columns)
+    """
+    if maps.ndim == 3:
+        return np.asarray(maps * image)
+    return np.asarray(np.sum(maps * image[:, np.newaxis], axis=0))
+
+
+def combine_sets(images: NDArray[Any]) -> NDArray[Any]:
+    """Magnitude sqrt(sum_j |m_j|^2) with the phase of the first; one image (rows, columns) stays as it is.
+
+    Parameters
+    ----------
+    images : complex (rows, columns) or (set, rows, columns)
+        Of one plane, an image for each set of maps.
+    """
+    if images.ndim == 2:
+        return images
+    magnitude = np.sqrt(np.sum(np.abs(images) ** 2, axis=0))
+    return np.asarray(magnitude * np.exp(1j * np.angle(images[0])), images.dtype)

@@ -13,6 +13,8 @@ from recon.findings import Finding
 COMFORTABLE_SAMPLES: Final = 10
 #: maps that leave out more than this share of the object are reported.
 LARGEST_SHARE_LEFT_OUT: Final = 0.15
+#: a second eigenvalue as large as the first in more than this share of the object is reported.
+SIZEABLE_FOLD: Final = 0.06
 
 
 def noise_findings(
@@ -59,7 +61,7 @@ def noise_findings(
 
 
 def map_findings(figures: Mapping[int, MapFigures], axis: str = "slice") -> list[Finding]:
-    """Findings about maps that leave out part of the object.
+    """Findings about maps that leave out part of the object, or have one set where two are needed, or the reverse.
 
     Parameters
     ----------
@@ -68,19 +70,49 @@ def map_findings(figures: Mapping[int, MapFigures], axis: str = "slice") -> list
     axis : str
         What a slice is called: `x` for the readout positions of a volume.
     """
+    planes = "slice(s)" if axis == "slice" else f"{axis} position(s)"
     shares = {position: each.object_share for position, each in figures.items()}
     poor = {position: share for position, share in shares.items() if share < 1 - LARGEST_SHARE_LEFT_OUT}
-    if not poor:
+    found: list[Finding] = []
+    if poor:
+        worst = min(poor, key=lambda position: poor[position])
+        found.append(
+            Finding(
+                "maps-incomplete",
+                "error" if poor[worst] == 0 else "warning",
+                f"The coil maps of {len(poor)} {planes} leave out part of the object ({1 - poor[worst]:.0%} of {axis} "
+                f"{worst}), and the image is zero there: sample more of the centre, try adaptive maps, or supply some.",
+                f"{axis} {worst}",
+                {"slices": len(poor), "smallest_share": poor[worst]},
+            )
+        )
+    folds = {p: each.folded_share for p, each in figures.items() if each.folded_share is not None}
+    folded = {p: fold for p, fold in folds.items() if fold > SIZEABLE_FOLD and figures[p].sets == 1}
+    if folded:
+        most = max(folded, key=lambda position: folded[position])
+        found.append(
+            Finding(
+                "object-exceeds-field-of-view",
+                "warning",
+                f"In {len(folded)} {planes} one set of coil maps does not explain the calibration data "
+                f"({folded[most]:.0%} of the object in {axis} {most}), as when the object exceeds the field of view "
+                f"and folds onto itself: set map_sets to 2, or measure a larger field of view.",
+                f"{axis} {most}",
+                {"slices": len(folded), "largest_share": folded[most]},
+            )
+        )
+    return found
+
+
+def idle_set_findings(figures: Mapping[int, MapFigures], wanted: int) -> list[Finding]:
+    """The finding that a second set of maps, asked for, is zero in every slice."""
+    if wanted == 1 or any(each.sets > 1 for each in figures.values()):
         return []
-    worst = min(poor, key=lambda position: poor[position])
-    planes = "slice(s)" if axis == "slice" else f"{axis} position(s)"
     return [
         Finding(
-            "maps-incomplete",
-            "error" if poor[worst] == 0 else "warning",
-            f"The coil maps of {len(poor)} {planes} leave out part of the object ({1 - poor[worst]:.0%} of {axis} "
-            f"{worst}), and the image is zero there: sample more of the centre, try adaptive maps, or supply some.",
-            f"{axis} {worst}",
-            {"slices": len(poor), "smallest_share": poor[worst]},
+            "second-map-set-empty",
+            "info",
+            "map_sets is 2, but nowhere does the object fold onto itself, so that one set was used: set map_sets to 1.",
+            "/map_sets",
         )
     ]

@@ -93,12 +93,6 @@ class CoilMaps:
         """Where any map is not zero: (rows, columns), or (set, rows, columns)."""
         return np.asarray(np.any(self.virtual != 0, axis=-3))
 
-    def coil_images(self, m: NDArray[Any]) -> NDArray[Any]:
-        """sum_j S_cj m_j in all whitened coils, (coil, rows, columns), of an image or one for each set."""
-        if self.whitened.ndim == 3:
-            return np.asarray(self.whitened * m)
-        return np.asarray(np.sum(self.whitened * m[:, np.newaxis], axis=0))
-
 
 class MapMaker:
     """Makes the maps of every slice by one method.

@@ -126,6 +126,10 @@ class Encoding(LinearOperator):
         image = scipy.fft.ifftn(spectrum, axes=self.axes, norm="forward", overwrite_x=True)
         kernels.add_conjugate(_real(map_), _real(image), _real(out))
 
+    def power(self) -> NDArray[Any]:
+        """sum_c |S_c|^2 at every pixel."""
+        return np.asarray(np.sum(np.abs(self.maps) ** 2, axis=0))
+
     def squared_norm_bound(self) -> float:
         """Upper bound of ||E||^2, the outside included: max over pixels of sum_c |S_c|^2, times the largest w^2."""
         power = sum(np.abs(map_).astype(np.float64) ** 2 for map_ in self.maps)
