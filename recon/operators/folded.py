@@ -62,8 +62,9 @@ class FoldedEncoding(Encoding):
         for coil in range(self.sets.shape[1]):
             maps = self.sets[:, coil]
             spectrum = scipy.fft.fftn(np.sum(maps * x, axis=0), axes=self.axes, overwrite_x=True)
-            spectrum *= self._plain_mask[0]
-            out += maps.conj() * scipy.fft.ifftn(spectrum, axes=self.axes, overwrite_x=True)
+            spectrum *= self._plain_mask[0]  # holds the inverse transform's scale too
+            image = scipy.fft.ifftn(spectrum, axes=self.axes, norm="forward", overwrite_x=True)
+            out += maps.conj() * image
         return out
 
     def squared_norm_bound(self) -> float:

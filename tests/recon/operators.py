@@ -5,10 +5,12 @@ from __future__ import annotations
 from collections.abc import Callable
 
 import numpy as np
+from numpy.typing import NDArray
 
 from recon.operators.base import LinearOperator
 from recon.operators.differences import Differences
 from recon.operators.encoding import Encoding
+from recon.operators.folded import FoldedEncoding
 from recon.operators.fourier import Fourier
 from recon.operators.wavelet import Wavelet
 from tests.recon.helpers import coil_maps, line_mask, radial_mask
@@ -28,6 +30,12 @@ def _weighted(shape: tuple[int, int], *, per_line: bool, dtype: type) -> Encodin
     mask = np.broadcast_to(counts > 0, shape)
     weights = np.broadcast_to(np.sqrt(counts / counts[counts > 0].mean()), shape)
     return Encoding(coil_maps(3, shape, dtype), mask, weights=weights)
+
+
+def _folded(shape: tuple[int, int], mask: NDArray[np.bool_], dtype: type) -> FoldedEncoding:
+    """Two sets of maps, both without a gap."""
+    first = coil_maps(3, shape, dtype)
+    return FoldedEncoding(np.stack([first, first.dtype.type(0.7) * first[::-1]]), mask)
 
 
 #: name and how to make the operator in a given complex precision.
@@ -50,6 +58,10 @@ REGISTRY: dict[str, Callable[[type], LinearOperator]] = {
     "encoding points odd": lambda dtype: _encoding(2, (13, 9), "points", dtype),
     "encoding lines weighted": lambda dtype: _weighted((15, 12), per_line=True, dtype=dtype),
     "encoding points weighted": lambda dtype: _weighted((12, 13), per_line=False, dtype=dtype),
+    "encoding of two sets lines": lambda dtype: _folded(
+        (15, 12), line_mask(15, 12, every=3, calibration=4), dtype
+    ),
+    "encoding of two sets points": lambda dtype: _folded((12, 12), radial_mask(12, 5), dtype),
     "encoding one coil": lambda dtype: _encoding(1, (11, 16), "lines", dtype),
 }
 
