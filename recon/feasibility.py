@@ -41,6 +41,8 @@ def check_job(facts: Mapping[str, Any], settings: Settings) -> None:
             ]
         )
     has_maps = bool(facts["objects"]["sensitivity"])
+    if settings.combination == "adaptive":
+        _check_adaptive(facts, settings)
     if settings.map_sets > 1:
         _check_map_sets(facts, settings)
     if settings.coil_maps == "supplied" and not has_maps:
@@ -104,6 +106,23 @@ def _check_volume(facts: Mapping[str, Any], settings: Settings) -> None:
         )
 
 
+def _check_adaptive(facts: Mapping[str, Any], settings: Settings) -> None:
+    """Adaptive combination is that of the coil images of one plane."""
+    if settings.method != "zero-filled":
+        _refuse(
+            "/combination",
+            f"received adaptive with the method {settings.method}, which solves for one image of all coils; accepted "
+            f"is adaptive with zero-filled: set coil_maps to adaptive instead, and combination to sensitivity",
+        )
+    is_volume = {"kz", "ky", "kx"} <= set(facts["axes"])
+    if is_volume and facts["sampling"]["varies_along_readout"]:
+        _refuse(
+            "/combination",
+            "received adaptive for a volume whose mask varies along kx; accepted is adaptive where planes are combined "
+            "one by one: choose root-sum-of-squares",
+        )
+
+
 def _check_map_sets(facts: Mapping[str, Any], settings: Settings) -> None:
     """Two sets are those of eigenvector maps, and solved plane by plane."""
     axes = facts["axes"]
@@ -147,5 +166,5 @@ def _refuse(pointer: str, detail: str) -> NoReturn:
 
 def needs_maps(settings: Settings, coils: int) -> bool:
     """Whether a reconstruction with these settings uses coil maps at all."""
-    is_coilwise = settings.method == "zero-filled" and settings.combination == "root-sum-of-squares"
+    is_coilwise = settings.method == "zero-filled" and settings.combination != "sensitivity"
     return coils > 1 and not is_coilwise

@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from recon import consistency
+from recon.coils.adaptive import adaptive_directions
 from recon.coils.combination import coil_images, combine_sets, root_sum_of_squares
 from recon.coils.maps import CoilMaps
 from recon.coils.noise import mix
@@ -126,7 +127,14 @@ def finish_plane(
 
 
 def _coil_by_coil(preparation: Preparation, plane: Plane) -> PlaneResult:
-    """Root-sum-of-squares of density-compensated coil images: they reproduce their samples, so no residual is left."""
+    """Combination of density-compensated coil images: they reproduce their samples, so no residual is left."""
     images = inverse_transform(plane.kspace * density_weights(plane.mask))
+    if preparation.settings.combination == "adaptive":
+        directions = adaptive_directions(images, preparation.compression.reference)
+        physical = mix(preparation.whitening.unwhitener, directions)
+        # maps of one in physical coils are the directions over this size
+        size = np.sqrt(np.sum(np.abs(physical) ** 2, axis=0, dtype=np.float64)).astype(np.float32)
+        image = preparation.grid.apply(size * np.sum(directions.conj() * images, axis=0))
+        return PlaneResult(image, np.zeros_like(image), np.zeros_like(plane.kspace), None)
     image = root_sum_of_squares(preparation.grid.apply(mix(preparation.whitening.unwhitener, images)))
     return PlaneResult(image, np.zeros_like(image), np.zeros_like(plane.kspace), None)

@@ -173,5 +173,8 @@ def _preparation(preparation: Preparation, map_figures: Mapping[int, MapFigures]
     figures = preparation.figures()
     slices = [{"slice": position, **map_figures[position].as_dict()} for position in sorted(map_figures)]
     sources = sorted({each["source"] for each in slices})
-    figures["coil_maps"] |= {"source": sources[0] if len(sources) == 1 else "mixed", "slices": slices}
+    figures["coil_maps"] |= {
+        "source": "mixed" if len(sources) > 1 else sources[0] if sources else "none",
+        "slices": slices,
+    }
     return figures

@@ -121,9 +121,10 @@ class Settings(BaseModel):
         Sets of eigenvector maps, and images: two where the object exceeds the field of view and folds onto itself. The
         image written is sqrt(|m_1|^2 + |m_2|^2) with the phase of the first.
     coil_compression : "auto", {"keep_energy": f}, {"coils": n} or null
-    combination : {"sensitivity", "root-sum-of-squares"}
-        Of iterative methods the latter is the magnitude sqrt(sum_c |S_c m|^2), which is |m|; of `zero-filled`, the coil
-        images' own, which needs no maps.
+    combination : {"sensitivity", "root-sum-of-squares", "adaptive"}
+        Of iterative methods root-sum-of-squares is the magnitude sqrt(sum_c |S_c m|^2), which is |m|; of `zero-filled`,
+        the coil images' own, which needs no maps. Adaptive weighs the coil images of `zero-filled` by their own local
+        covariance, which needs no maps and no calibration region either.
     volume : {"planes", "joint"}
         Of a scan with `kz ky kx`: every readout position alone (its mask must not vary along `kx`), or all as one
         problem, whose wavelets and total variation act along three axes. Where readouts are complete, a method without
@@ -152,7 +153,7 @@ class Settings(BaseModel):
     coil_compression: Annotated[
         Literal["auto"] | KeepEnergy | KeepCoils | None, BeforeValidator(_compression)
     ] = "auto"
-    combination: Literal["sensitivity", "root-sum-of-squares"] = "sensitivity"
+    combination: Literal["sensitivity", "root-sum-of-squares", "adaptive"] = "sensitivity"
     volume: Literal["planes", "joint"] = "planes"
     exclude: Annotated[tuple[Excludable, ...], BeforeValidator(_exclude)] = ()
     tolerance: float = Field(default=5e-5, ge=1e-6, lt=1, strict=True, allow_inf_nan=False)
