@@ -27,12 +27,10 @@ from typing import Any
 import numpy as np
 import scipy
 
-from benchmarks.anatomy import CASES, Case, SimulatedScan, nrmse, simulate
-from recon.axes import LabelledArray
+from benchmarks.anatomy import CASES, Case, SimulatedScan, as_scan, nrmse, simulate
 from recon.caution import CAUTION
 from recon.operators.encoding import Encoding
 from recon.pipeline import reconstruct
-from recon.scan import Scan
 from recon.settings import Settings
 from recon.solver import Problem, Solution, solve
 
@@ -88,15 +86,6 @@ class Row:
     def ratio(self) -> float:
         """Our error over the best possible one, both at the best scale."""
         return self.ours[0] / self.best_possible[0]
-
-
-def as_scan(simulated: SimulatedScan) -> Scan:
-    """Return the measured part of a simulated scan as the pipeline takes it."""
-    return Scan(
-        LabelledArray(simulated.kspace, ("coil", "ky", "kx")),
-        mask_array=LabelledArray(simulated.mask, ("ky", "kx")),
-        noise_array=LabelledArray(simulated.noise, ("coil", "sample")),
-    )
 
 
 def true_problem(simulated: SimulatedScan) -> tuple[Encoding, np.ndarray[Any, Any], float]:

@@ -7,8 +7,7 @@ from dataclasses import replace
 import numpy as np
 import pytest
 
-from benchmarks.anatomy import Case, SimulatedScan, nrmse, simulate
-from benchmarks.quality import as_scan
+from benchmarks.anatomy import Case, SimulatedScan, as_scan, nrmse, simulate
 from recon.axes import LabelledArray
 from recon.pipeline import reconstruct
 from recon.scan import Scan
