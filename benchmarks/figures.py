@@ -41,11 +41,20 @@ class Bar:
 
 @dataclass(frozen=True)
 class Result:
-    """One measured number: CPU seconds where the bar's unit is `U`; `details` are plain JSON."""
+    """One measured number: CPU seconds where the bar's unit is `U`.
+
+    Attributes
+    ----------
+    details : dict
+        What it is made of, as plain JSON.
+    text : str
+        The same for a reader at a terminal, where there is more to say.
+    """
 
     bar: str
     value: float
     details: dict[str, Any] = field(default_factory=dict)
+    text: str = ""
 
 
 @dataclass(frozen=True)
@@ -166,8 +175,8 @@ def in_units(details: Any, unit: float) -> Any:
 HEAD = ("figure", "value", "bar", "aim", "met")
 
 
-def cells(row: Row) -> tuple[str, ...]:
-    """One row as text."""
+def cells(row: Row, *, is_judged: bool) -> tuple[str, ...]:
+    """One row as text; without a verdict where sizes were reduced."""
     bar = row.bar
 
     def shown(value: float | None) -> str:
@@ -179,20 +188,22 @@ def cells(row: Row) -> tuple[str, ...]:
         return f"{number} {bar.unit}" if bar.unit != "ratio" else number
 
     met = "no" if not row.is_met else "yes, aim too" if row.is_aim_met else "yes"
+    if not is_judged:
+        met = ""
     sign = "at least " if bar.at_least else ""
     aim = f"{sign}{shown(bar.aim)}" if bar.aim is not None else ""
     return bar.what, shown(row.value), f"{sign}{shown(bar.bar)}", aim, met
 
 
-def text_table(rows: list[Row]) -> str:
+def text_table(rows: list[Row], *, is_judged: bool = True) -> str:
     """Return the table for a terminal."""
-    lines = [HEAD, *(cells(row) for row in rows)]
+    lines = [HEAD, *(cells(row, is_judged=is_judged) for row in rows)]
     widths = [max(len(line[i]) for line in lines) for i in range(len(HEAD))]
     shown = ["  ".join(cell.ljust(width) for cell, width in zip(line, widths, strict=True)) for line in lines]
     return "\n".join(line.rstrip() for line in (shown[0], "-" * sum(widths), *shown[1:]))
 
 
-def markdown_table(rows: list[Row]) -> str:
+def markdown_table(rows: list[Row], *, is_judged: bool = True) -> str:
     """Return the table for a document."""
-    lines = [HEAD, ("---",) * len(HEAD), *(cells(row) for row in rows)]
+    lines = [HEAD, ("---",) * len(HEAD), *(cells(row, is_judged=is_judged) for row in rows)]
     return "\n".join(f"| {' | '.join(line)} |" for line in lines)

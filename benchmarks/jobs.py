@@ -33,9 +33,11 @@ def repeated(
     return next(job for job in jobs if job.cpu_seconds == median), seconds
 
 
-def warm_up(folder: Path) -> None:
+def warm_up(run: Run) -> None:
     """Fill the cache of compiled kernels, whose compilation happens once for each installation."""
-    scan = folder / "warm-up.h5"
+    if run.reduced:
+        return
+    scan = run.folder / "warm-up.h5"
     write_slices(scan, slices=1, matrix=64)
     run_job(scan, scan.with_suffix(".image.h5"), {"max_iterations": 2})
     scan.unlink()
@@ -49,12 +51,12 @@ def _slices_file(run: Run, slices: int, matrix: int) -> Path:
 
 
 def _pipeline_size(run: Run) -> tuple[int, int]:
-    return (3, 64) if run.reduced else (64, 256)
+    return (2, 64) if run.reduced else (64, 256)
 
 
 def measure_pipeline(run: Run) -> list[Result]:
     """CPU seconds for each slice of a scan of many, default settings."""
-    warm_up(run.folder)
+    warm_up(run)
     slices, matrix = _pipeline_size(run)
     scan = _slices_file(run, slices, matrix)
     job, seconds = repeated(scan, {}, run.times(1))
@@ -78,7 +80,7 @@ def _volume_file(run: Run) -> Path:
 
 def measure_volume(run: Run) -> list[Result]:
     """CPU seconds of a whole volume with two phase encodes, solved plane by plane along the readout."""
-    warm_up(run.folder)
+    warm_up(run)
     scan = _volume_file(run)
     job, seconds = repeated(scan, {"volume": "planes", **FIXED}, run.times(1))
     size = scan.stat().st_size / 1e6
@@ -92,9 +94,9 @@ def measure_growth(run: Run) -> list[Result]:
     Time at a matrix of 128 with default settings; memory at 256, two iterations for each slice, since neither the
     strengths nor the iterations change what is kept.
     """
-    warm_up(run.folder)
-    few, many = (2, 6) if run.reduced else (8, 128)
-    small, large = (64, 64) if run.reduced else (128, 256)
+    warm_up(run)
+    few, many = (1, 3) if run.reduced else (8, 128)
+    small, large = (48, 48) if run.reduced else (128, 256)
     timed, weighed = {}, {}
     for slices in (few, many):
         scan = _slices_file(run, slices, small)

@@ -1,120 +1,95 @@
-"""Peak memory of the computing process, for few and for many slices.
+"""Peak memory of problems that have to be solved in one piece, as a multiple of their k-space.
 
-    python -m benchmarks.memory [--slices 8 64] [--matrix 256] [--coils 8] [--iterations N] [--output FILE.json]
-
-Each scan is reconstructed from file to file in a process of its own, whose peak resident size the kernel reports.
-It must stay below the limit and must not grow with the number of slices.
+Each scan is reconstructed from file to file in a process of its own; what a process holds that has only imported the
+program is told beside it. A few iterations are enough, since the solver allocates everything in its first.
 """
 
 from __future__ import annotations
 
-import argparse
-import json
-import subprocess
-import sys
-import tempfile
-import time
+from collections.abc import Callable
+from dataclasses import asdict
+from functools import partial
 from pathlib import Path
 from typing import Any
 
 import h5py
 import numpy as np
 
-from benchmarks.quality import machine
-from recon.caution import CAUTION
-from recon.phantom import Ellipse, ellipse_kspace, ring_coils
-
-LIMIT_MB = 800.0
-#: growth from the smallest to the largest scan that is still taken for allocator noise.
-GROWTH_MB = 40.0
-
-CHILD = """
-import json, resource, sys
+from benchmarks.anatomy import COILS
+from benchmarks.figures import Bar, Figure, Result, Run
+from benchmarks.moving import Motion, simulate_series
+from benchmarks.process import idle_bytes, run_job
+from benchmarks.scan_files import write_volume
+from recon.formats import write_scan
 from recon.pipeline import reconstruct_file
 from recon.settings import parse_settings
-report = reconstruct_file(sys.argv[1], sys.argv[2], parse_settings(json.loads(sys.argv[3])))
-peak = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
-unit = 1 if sys.platform == "darwin" else 1024
-print(json.dumps({"peak_mb": peak * unit / 1e6, "planes": len(report["solver"]["planes"])}))
-"""
+
+ITERATIONS = 12
+JOINT: dict[str, Any] = {"volume": "joint", "max_iterations": ITERATIONS}
+SERIES: dict[str, Any] = {"temporal_strength": "auto", "max_iterations": ITERATIONS}
 
 
-def write_large_scan(path: Path, *, slices: int, coils: int, matrix: int) -> None:
-    """Write an undersampled scan slice by slice, so that this process stays small too."""
-    rng = np.random.default_rng(4)
-    clean = ellipse_kspace(
-        [Ellipse(1.0, (0, 0), (0.7, 0.8)), Ellipse(-0.5, (0.2, 0.1), (0.2, 0.3), 20)],
-        (matrix, matrix),
-        maps=ring_coils(coils),
+def joint_scan(run: Run) -> Path:
+    """Write a cube with two phase encodes at R=6."""
+    path = run.folder / "joint.h5"
+    side, calibration = (24, 10) if run.reduced else (96, 20)
+    write_volume(path, matrix=(side, side, side), acceleration=4, calibration=calibration)
+    return path
+
+
+def series_scan(run: Run) -> Path:
+    """Write a series of frames."""
+    path = run.folder / "series.h5"
+    frames, matrix, acceleration = (6, 64, 4) if run.reduced else (32, 128, 6)
+    scan = simulate_series(Motion("breathe", acceleration, 30, 301, frames, matrix)).scan
+    assert scan.mask_array is not None
+    assert scan.noise_array is not None
+    kspace, mask, noise = (
+        np.asarray(array.data) for array in (scan.kspace_array, scan.mask_array, scan.noise_array)
     )
-    lines = (np.arange(matrix) - matrix // 2) % 3 == 0
-    lines[matrix // 2 - 12 : matrix // 2 + 12] = True
-    with h5py.File(path, "w") as file:
-        file.attrs.update(layout="fallow-scan", layout_version=1)
-        kspace = file.create_dataset("kspace", (slices, coils, matrix, matrix), np.complex64)
-        kspace.attrs["axes"] = "slice,coil,ky,kx"
-        for position in range(slices):
-            noise = rng.standard_normal((2, *clean.shape), np.float32) * np.float32(0.02)
-            kspace[position] = (clean * (1 + 0.01 * position) + noise[0] + 1j * noise[1]) * lines[:, None]
-        file["mask"] = lines
-        file["mask"].attrs["axes"] = "ky"
-        silent = rng.standard_normal((2, coils, 2000)) * 0.02
-        file["noise"] = (silent[0] + 1j * silent[1]).astype(np.complex64)
-        file["noise"].attrs["axes"] = "coil,sample"
+    axes = scan.kspace_array.axes
+    write_scan(path, kspace, axes, mask=mask, mask_axes=scan.mask_array.axes, noise=noise)
+    return path
 
 
-def measure(
-    *, slices: int, coils: int, matrix: int, settings: dict[str, Any], folder: Path
-) -> dict[str, Any]:
-    """Return peak resident size and time of reconstructing one scan in a process of its own."""
-    scan, image = folder / f"scan-{slices}.h5", folder / f"image-{slices}.h5"
-    write_large_scan(scan, slices=slices, coils=coils, matrix=matrix)
-    size_mb = scan.stat().st_size / 1e6
-    started = time.perf_counter()
-    command = [sys.executable, "-c", CHILD, str(scan), str(image), json.dumps(settings)]
-    done = subprocess.run(command, capture_output=True, text=True, check=True)
-    seconds = time.perf_counter() - started
-    figures: dict[str, Any] = json.loads(done.stdout)
+def kspace_bytes(scan: Path) -> int:
+    """Return the size of a scan's k-space in complex64."""
+    with h5py.File(scan) as file:
+        return int(file["kspace"].size) * 8
+
+
+def _measure(run: Run, name: str, write: Callable[[Run], Path], settings: dict[str, Any]) -> list[Result]:
+    scan = write(run)
+    size, idle = kspace_bytes(scan), idle_bytes()
+    job = run_job(scan, scan.with_suffix(".image.h5"), settings)
     scan.unlink()
-    image.unlink()
-    return {"slices": slices, "scan_mb": size_mb, "seconds": seconds, **figures}
+    details = asdict(job) | {
+        "coils": COILS,
+        "kspace_mb": size / 1e6,
+        "peak_mb": job.peak_bytes / 1e6,
+        "idle_mb": idle / 1e6,
+        "multiple_without_idle": (job.peak_bytes - idle) / size,
+    }
+    return [Result(name, job.peak_bytes / size, details)]
 
 
-def main(arguments: list[str] | None = None) -> int:
-    """Print peak memory for each number of slices; exit status 1 when it grows or exceeds the limit."""
-    parser = argparse.ArgumentParser(description="Peak memory of the computing process.")
-    parser.add_argument("--slices", type=int, nargs="+", default=[8, 64])
-    parser.add_argument("--matrix", type=int, default=256)
-    parser.add_argument("--coils", type=int, default=8)
-    parser.add_argument(
-        "--iterations", type=int, help="stop each plane after this many instead of at its optimum"
+def _work(run: Run, write: Callable[[Run], Path], settings: dict[str, Any]) -> Callable[[], Any]:
+    scan = write(run)
+    return partial(reconstruct_file, scan, scan.with_suffix(".image.h5"), parse_settings(settings))
+
+
+def _figure(name: str, what: str, write: Callable[[Run], Path], settings: dict[str, Any]) -> Figure:
+    return Figure(
+        name,
+        (Bar(name, what, "x", 12, 8),),
+        partial(_measure, name=name, write=write, settings=settings),
+        partial(_work, write=write, settings=settings),
     )
-    parser.add_argument("--output", type=Path, help="write the figures as JSON")
-    options = parser.parse_args(arguments)
-    settings = {} if options.iterations is None else {"max_iterations": options.iterations}
-    rows = []
-    with tempfile.TemporaryDirectory() as folder:
-        for slices in options.slices:
-            row = measure(
-                slices=slices,
-                coils=options.coils,
-                matrix=options.matrix,
-                settings=settings,
-                folder=Path(folder),
-            )
-            rows.append(row)
-            print(
-                f"{slices:4d} slices, {row['scan_mb']:6.0f} MB of k-space: peak {row['peak_mb']:.0f} MB, "
-                f"{row['seconds']:.0f} s"
-            )
-    peaks = [row["peak_mb"] for row in rows]
-    print(f"limit {LIMIT_MB:.0f} MB; growth {peaks[-1] - peaks[0]:+.0f} MB. {CAUTION}")
-    if options.output:
-        options.output.write_text(
-            json.dumps({"caution": CAUTION, "rows": rows, "machine": machine()}, indent=2) + "\n"
-        )
-    return 0 if max(peaks) < LIMIT_MB and peaks[-1] - peaks[0] < GROWTH_MB else 1
 
 
-if __name__ == "__main__":
-    sys.exit(main())
+JOINT_VOLUME = _figure(
+    "memory-joint", "peak memory over k-space, 3-D joint 8 x 96 x 96 x 96", joint_scan, JOINT
+)
+JOINT_SERIES = _figure(
+    "memory-series", "peak memory over k-space, 2-D + time 8 x 128 x 128 x 32", series_scan, SERIES
+)

@@ -1,69 +1,42 @@
-"""Errors on real anatomy: zero-filled, best Tikhonov, default settings, and the best that the objective can do.
-
-    python -m benchmarks.quality [--reduced] [--output FILE.json] [--processes N]
+"""Errors on real anatomy: zero-filled, best Tikhonov, default settings, and the best that the plain objective can do.
 
 Every case is a scan simulated by `benchmarks.anatomy`. Four images are compared with the truth:
 
 - zero-filled: the linear image without any inversion;
 - Tikhonov: the best strength of a grid, found with the truth in hand, with the same coil maps as ours;
 - ours: default settings, no knowledge of the truth;
-- best possible: the same objective solved to convergence with the true coil maps and the true noise covariance,
-  and the best total strength and wavelet share of a grid, found with the truth in hand.
+- best possible: the plain objective (no cycle spinning), converged, with the true coil maps and the true noise
+  covariance, and the best total strength and wavelet share of a fine grid, found with the truth in hand.
 """
 
 from __future__ import annotations
 
-import argparse
-import json
-import platform
-import sys
 import time
-from concurrent.futures import ProcessPoolExecutor
+from collections.abc import Callable
 from dataclasses import asdict, dataclass
 from functools import partial
-from pathlib import Path
-from typing import Any
+from typing import Any, Final
 
 import numpy as np
-import scipy
 
 from benchmarks.anatomy import CASES, Case, SimulatedScan, as_scan, nrmse, simulate
+from benchmarks.automatic import REDUCED_CASE
+from benchmarks.figures import Bar, Figure, Result, Run
+from benchmarks.search import COARSE, FINE, Grid, best_of, side_by_side
 from recon.caution import CAUTION
 from recon.operators.encoding import Encoding
 from recon.pipeline import reconstruct
 from recon.settings import Settings
 from recon.solver import Problem, Solution, solve
 
-
-@dataclass(frozen=True)
-class Grid:
-    """Strengths tried with the truth in hand; totals rise until the error does."""
-
-    tikhonov: tuple[float, ...]
-    totals: tuple[float, ...]
-    shares: tuple[float, ...]
-    tolerance: float
-    max_iterations: int
-
-
-FULL_GRID = Grid(
-    tikhonov=(0.0003, 0.001, 0.002, 0.005, 0.01, 0.02, 0.05, 0.1, 0.2, 0.5, 1, 2),
-    totals=(0.02, 0.035, 0.05, 0.07, 0.1, 0.15, 0.2, 0.3, 0.45, 0.7, 1.1, 1.6),
-    shares=(0.0, 0.3, 0.45, 0.6),
-    tolerance=2e-5,
-    max_iterations=500,
-)
-REDUCED_GRID = Grid(
-    tikhonov=(0.001, 0.005, 0.02, 0.1, 0.5),
-    totals=(0.05, 0.1, 0.2, 0.4),
-    shares=(0.3, 0.5),
-    tolerance=1e-4,
-    max_iterations=300,
-)
-#: once the error exceeds the smallest of its share by this factor, stronger penalties are not tried.
-RISEN = 1.05
+#: strengths of the linear image.
+TIKHONOV: Final = (0.0003, 0.001, 0.002, 0.005, 0.01, 0.02, 0.05, 0.1, 0.2, 0.5, 1.0, 2.0)
+REDUCED_TIKHONOV: Final = (0.001, 0.005, 0.02, 0.1, 0.5)
+#: how far each point of the grid is solved.
+TOLERANCE: Final = 2e-5
+MOST_ITERATIONS: Final = 500
 #: low, middle and high acceleration on both pictures.
-REDUCED_CASES = (CASES[2], CASES[6], CASES[12])
+REDUCED_CASES: Final = (CASES[2], CASES[6], CASES[12])
 
 
 @dataclass(frozen=True)
@@ -106,20 +79,18 @@ def best_possible(
 ) -> tuple[tuple[float, float], float, float]:
     """Return the smallest error on a grid of strengths, with the total and the wavelet share that gave it."""
     encoding, data, kappa = true_problem(simulated)
-    best: tuple[tuple[float, float], float, float] = ((np.inf, np.inf), 0.0, 0.0)
-    for share in grid.shares:
-        start: Solution | None = None
-        smallest = np.inf
-        for total in grid.totals:
-            problem = Problem(encoding, data, wavelet, share * total, (1 - share) * total)
-            start = solve(problem, tolerance=grid.tolerance, max_iterations=grid.max_iterations, start=start)
-            error = nrmse(start.image / kappa, simulated)
-            smallest = min(smallest, error[0])
-            if error[0] < best[0][0]:
-                best = (error, total, share)
-            if error[0] > RISEN * smallest:
-                break
-    return best
+    solutions: list[Solution] = []
+    errors: dict[tuple[float, float], tuple[float, float]] = {}
+
+    def error(total: float, share: float) -> float:
+        problem = Problem(encoding, data, wavelet, share * total, (1 - share) * total)
+        start = solutions[-1] if solutions else None
+        solutions[:] = [solve(problem, tolerance=TOLERANCE, max_iterations=MOST_ITERATIONS, start=start)]
+        errors[total, share] = nrmse(solutions[0].image / kappa, simulated)
+        return errors[total, share][0]
+
+    best = best_of(error, grid)
+    return errors[best.total, best.share], best.total, best.share
 
 
 def evaluate(case: Case, grid: Grid) -> Row:
@@ -134,7 +105,7 @@ def evaluate(case: Case, grid: Grid) -> Row:
         strength: nrmse(
             reconstruct(scan, Settings(method="tikhonov", tikhonov_strength=strength)).image, simulated
         )
-        for strength in grid.tikhonov
+        for strength in (TIKHONOV if grid is FINE else REDUCED_TIKHONOV)
     }
     strength = min(linear, key=lambda s: linear[s][0])
     best, total, share = best_possible(simulated, grid, Settings().wavelet)
@@ -173,47 +144,34 @@ def table(rows: list[Row]) -> str:
     return "\n".join(lines)
 
 
-def machine() -> dict[str, Any]:
-    """Return what a reader needs to compare times: no names of machine or user."""
-    return {
-        "architecture": platform.machine(),
-        "system": platform.system(),
-        "python": platform.python_version(),
-        "numpy": np.__version__,
-        "scipy": scipy.__version__,
-    }
-
-
-def main(arguments: list[str] | None = None) -> int:
-    """Print the table and write the figures; exit status 1 when a limit is missed."""
-    parser = argparse.ArgumentParser(description="Error table on real anatomy.")
-    parser.add_argument("--reduced", action="store_true", help="three cases and a coarse grid")
-    parser.add_argument("--output", type=Path, help="write the figures as JSON")
-    parser.add_argument("--processes", type=int, default=1, help="cases computed side by side")
-    options = parser.parse_args(arguments)
-    grid, cases = (REDUCED_GRID, REDUCED_CASES) if options.reduced else (FULL_GRID, CASES)
-    if options.processes > 1:
-        with ProcessPoolExecutor(options.processes) as pool:
-            rows = list(pool.map(partial(evaluate, grid=grid), cases))
-    else:
-        rows = [evaluate(case, grid) for case in cases]
-    print(table(rows))
+def measure_best(run: Run) -> list[Result]:
+    """Mean and worst ratio over the cases."""
+    cases, grid = ([REDUCED_CASE], COARSE) if run.reduced else (list(CASES), FINE)
+    rows = side_by_side(partial(evaluate, grid=grid), cases, run.processes)
     ratios = [row.ratio for row in rows]
-    figures = {
-        "caution": CAUTION,
-        "rows": [asdict(row) | {"ratio": row.ratio} for row in rows],
-        "ratio_mean": float(np.mean(ratios)),
-        "ratio_worst": max(ratios),
-        "grid": asdict(grid),
-        "machine": machine(),
-    }
-    if options.output:
-        options.output.write_text(json.dumps(figures, indent=2) + "\n")
-    passed = (
-        all(row.ours[0] < row.tikhonov[0] for row in rows) and np.mean(ratios) <= 1.10 and max(ratios) <= 1.25
-    )
-    return 0 if passed else 1
+    details = {"cases": [asdict(row) | {"ratio": row.ratio} for row in rows]}
+    return [
+        Result("best-possible-mean", float(np.mean(ratios)), details, table(rows)),
+        Result("best-possible-worst", max(ratios)),
+    ]
 
 
-if __name__ == "__main__":
-    sys.exit(main())
+def _work(run: Run) -> Callable[[], Any]:
+    return partial(reconstruct, as_scan(simulate(REDUCED_CASE if run.reduced else CASES[5])), Settings())
+
+
+BEST_POSSIBLE = Figure(
+    "best-possible",
+    (
+        Bar(
+            "best-possible-mean",
+            "error of the default pipeline over true maps, noise, best strength and mix, mean",
+            "ratio",
+            1.05,
+            1.0,
+        ),
+        Bar("best-possible-worst", "the same, worst case", "ratio", 1.10),
+    ),
+    measure_best,
+    _work,
+)

@@ -7,6 +7,7 @@ are not judged on them: volumes are simulated on the grid that they are reconstr
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 from pathlib import Path
 
 import h5py
@@ -32,10 +33,8 @@ def large_case(position: int, snr: float, seed: int, *, matrix: int = 256, point
     """
     enlarged = ENLARGED if matrix > 128 else 1.0
     acceleration = 4 if matrix >= 128 else 2
-    kind = "points" if points else "lines"
-    return Case(
-        "axial", position, (matrix, matrix), acceleration, snr, seed, mask_kind=kind, enlarged=enlarged
-    )
+    case = Case("axial", position, (matrix, matrix), acceleration, snr, seed, enlarged=enlarged)
+    return replace(case, mask_kind="points") if points else case
 
 
 def _start(file: h5py.File, shape: tuple[int, ...], axes: str) -> h5py.Dataset:

@@ -88,9 +88,10 @@ def _after(problem: Problem, iterations: int) -> NDArray[Any]:
 
 def measure_case(run: Run, snr: float, *, points: bool) -> dict[str, Any]:
     """Return iterations and CPU seconds to come close, and where the default tolerance stops."""
-    simulated = simulate(large_case(90, snr, 41, matrix=96 if run.reduced else 256, points=points))
+    simulated = simulate(large_case(90, snr, 41, matrix=64 if run.reduced else 256, points=points))
     problem = stated_problem(simulated)
-    answer = solve(problem, tolerance=CONVERGED, max_iterations=MOST_ITERATIONS)
+    goal = 1e-4 if run.reduced else CONVERGED
+    answer = solve(problem, tolerance=goal, max_iterations=MOST_ITERATIONS)
     inside = simulated.object_mask
 
     def is_close(iterations: int) -> bool:
@@ -122,7 +123,7 @@ def _measure(run: Run, name: str, *, points: bool) -> list[Result]:
 
 
 def _work(run: Run, *, points: bool) -> Callable[[], Any]:
-    simulated = simulate(large_case(90, SNRS[0], 41, matrix=96 if run.reduced else 256, points=points))
+    simulated = simulate(large_case(90, SNRS[0], 41, matrix=64 if run.reduced else 256, points=points))
     return partial(_after, stated_problem(simulated), 40)
 
 

@@ -21,7 +21,7 @@ lock() { # FILE PURPOSE UV-ARGUMENTS...
 lock requirements-server.txt "What the service, its workers, the client and the commands need." \
     pyproject.toml - --extra server "$@"
 lock requirements-test.txt "What the tests need, the service included." \
-    pyproject.toml - --extra server --extra test --constraint deploy/requirements-server.txt "$@"
+    pyproject.toml - --extra server --extra test --extra benchmarks --constraint deploy/requirements-server.txt "$@"
 
 # The head volume that the tests simulate scans from is package data; the viewer around it is never imported, so its
 # own dependencies stay out.
