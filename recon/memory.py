@@ -14,7 +14,7 @@ from recon.errors import InvalidScan, InvalidSettings
 from recon.grid import image_grid
 from recon.scan import Scan
 from recon.settings import Settings
-from recon.volume import BLOCK_BYTES, slabs
+from recon.volume import BLOCK_BYTES, LARGEST_CHUNKS, slabs
 from recon.volume_sink import POSITIONS
 
 #: the program itself: interpreter, libraries, compiled loops.
@@ -50,7 +50,8 @@ def estimate_bytes(scan: Scan, settings: Settings, *, threads: int = 1) -> int:
     lines, is_complete = _sampled_lines(scan)
     positions = grid.kept[2] if is_complete else grid.encoded[2]
     plane = grid.encoded[0] * grid.encoded[1]
-    total = PROGRAM_BYTES + 2 * BLOCK_BYTES
+    has_chunks = getattr(scan.kspace_array.data, "chunks", None) is not None
+    total = PROGRAM_BYTES + (LARGEST_CHUNKS if has_chunks else 2 * BLOCK_BYTES)
     if is_complete:
         total += lines * positions * coils * _NUMBER
     if scan.sensitivity_array is not None:

@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 from recon.averages import relative_weights
 from recon.coils.compression import Compression
 from recon.coils.gathering import Calibration, Gatherer
-from recon.coils.maps import CoilMaps, MapMaker, MapMethod, squared_gain
+from recon.coils.maps import CoilMaps, MapMaker, MapMethod, largest_power, squared_gain
 from recon.coils.noise import Whitening, estimate_whitening
 from recon.errors import InvalidScan
 from recon.exclusion import Excluded, leave_out
@@ -74,6 +74,8 @@ class Preparation:
         Those of each readout position, where a volume is solved plane by plane; they share one phase reference.
     volume : Volume or None
         The volume that the planes are from.
+    largest_power : float
+        Of a volume's object, see `MapMaker`: positions beyond its ends hold none of it.
     settings : Settings
         As resolved: no strength is `auto` any more, nor the map method where maps are made.
     shape : (rows, columns)
@@ -103,6 +105,7 @@ class Preparation:
     mean_count: float = 1.0
     compressions: Mapping[int, Compression] = field(default_factory=dict)
     volume: Volume | None = None
+    largest_power: float = 0.0
     excluded: Excluded = field(default_factory=Excluded)
 
     @property
@@ -131,7 +134,13 @@ class Preparation:
         assert self.map_method is not None
         compression = self.compression_of(position)
         maker = MapMaker(
-            self.scan, self.map_method, self.whitening, compression, self.shape, self.settings.map_sets
+            self.scan,
+            self.map_method,
+            self.whitening,
+            compression,
+            self.shape,
+            self.settings.map_sets,
+            largest=self.largest_power,
         )
         return maker.make(position, self.calibration[position])
 
@@ -254,6 +263,9 @@ def prepare(scan: Scan, settings: Settings, report: Report) -> Preparation:
         mean_count=mean_count,
         compressions=compressions,
         volume=volume,
+        largest_power=0.0
+        if volume is None
+        else largest_power((block for of_slice in blocks.values() for block in of_slice), whitening),
         excluded=excluded,
     )
 

@@ -19,8 +19,9 @@ from recon.solver import Solution
 SCHEMA_VERSION: Final = 1
 #: values of the objective kept for each plane: enough to draw the curve.
 HISTORY_LENGTH: Final = 32
-#: readout positions of a volume whose curve is kept, at most.
+#: readout positions of a volume whose curve, or maps, are told, at most.
 CURVES: Final = 16
+POSITIONS_TOLD: Final = 64
 
 
 class SolverFigures:
@@ -173,6 +174,9 @@ def _preparation(preparation: Preparation, map_figures: Mapping[int, MapFigures]
     figures = preparation.figures()
     slices = [{"slice": position, **map_figures[position].as_dict()} for position in sorted(map_figures)]
     sources = sorted({each["source"] for each in slices})
+    if preparation.volume is not None:  # a few positions tell of all
+        step = -(-len(slices) // POSITIONS_TOLD) or 1
+        slices = [{"x": each.pop("slice"), **each} for each in slices[::step]]
     figures["coil_maps"] |= {
         "source": "mixed" if len(sources) > 1 else sources[0] if sources else "none",
         "slices": slices,

@@ -23,6 +23,8 @@ from recon.scan import PlaneIndex, Scan, cropped_readout
 
 #: a volume is read in blocks of `kz` of about this size: fewer passes over a file whose fastest axis is another.
 BLOCK_BYTES: Final = 16 << 20
+#: or, in a file of chunks, of whole ones up to this size.
+LARGEST_CHUNKS: Final = 64 << 20
 
 #: frame and contrast of one volume.
 Key = tuple[int, int]
@@ -38,7 +40,11 @@ class _Blocks:
             int(np.prod([data.shape[other] for other in inner]))
             * getattr(data, "dtype", np.dtype("c8")).itemsize
         )
-        self._step = max(1, min(data.shape[axis], BLOCK_BYTES // max(size, 1)))
+        step = max(1, BLOCK_BYTES // max(size, 1))
+        chunks = getattr(data, "chunks", None)
+        if chunks is not None and chunks[axis] * size <= LARGEST_CHUNKS:
+            step = -(-step // chunks[axis]) * chunks[axis]  # compressed chunks are unpacked once
+        self._step = min(data.shape[axis], step)
         self._kept: tuple[Any, NDArray[Any]] | None = None
 
     @property

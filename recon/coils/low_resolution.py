@@ -36,7 +36,7 @@ def equal_blocks(blocks: Sequence[NDArray[Any]]) -> list[NDArray[Any]]:
 
 
 def object_pixels(
-    blocks: Sequence[NDArray[Any]], level: float, *, has_noise_units: bool
+    blocks: Sequence[NDArray[Any]], level: float, *, has_noise_units: bool, largest: float = 0.0
 ) -> NDArray[np.bool_]:
     """Pixels that hold an object: above a fraction of the largest magnitude, and well above the noise.
 
@@ -48,6 +48,8 @@ def object_pixels(
         Of the largest magnitude (root of the sum over coils and blocks of the squares).
     has_noise_units : bool
         Whether the noise variance is one.
+    largest : float
+        Power (square of the magnitude, of one block) that counts as the largest where these planes hold less.
 
     Returns
     -------
@@ -62,5 +64,5 @@ def object_pixels(
     # a Hann-weighted block spreads unit noise over a grid of more pixels than it has samples
     noise = channels * HANN_POWER * equal[0][0].size / power.size if has_noise_units else 0.0
     # the sum over C channels of noise alone has a standard deviation of 1/sqrt(C) of its mean
-    limit = max(noise * (1 + 4 / np.sqrt(channels)), level**2 * float(power.max()))
+    limit = max(noise * (1 + 4 / np.sqrt(channels)), level**2 * max(float(power.max()), largest * len(equal)))
     return np.asarray(power > limit)

@@ -7,6 +7,7 @@ whatever whitening and compression did: maps found in virtual coils are carried 
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from dataclasses import dataclass, replace
 from typing import Any, Final, Literal
 
@@ -107,6 +108,8 @@ class MapMaker:
         Of the plane that is solved.
     sets : {1, 2}
         Sets of maps wanted, of eigenvector maps alone.
+    largest : float
+        Power of the largest low-resolution pixel of the object that all slices are part of; 0 where each stands alone.
     """
 
     def __init__(
@@ -117,6 +120,7 @@ class MapMaker:
         compression: Compression,
         shape: tuple[int, int],
         sets: int = 1,
+        largest: float = 0.0,
     ) -> None:
         self.scan = scan
         self.method = method
@@ -124,6 +128,7 @@ class MapMaker:
         self.compression = compression
         self.shape = shape
         self.sets = sets
+        self.largest = largest
 
     def make(self, position: int, calibration: Calibration) -> CoilMaps:
         """Maps of one slice; a second set that would be zero everywhere is left out.
@@ -182,7 +187,9 @@ class MapMaker:
         return CoilMaps(np.stack(virtual), np.stack(whitened), figures)
 
     def _share_of_object(self, blocks: list[NDArray[Any]], where: NDArray[np.bool_]) -> float:
-        is_object = object_pixels(blocks, OBJECT_LEVEL, has_noise_units=self.whitening.has_noise_units)
+        is_object = object_pixels(
+            blocks, OBJECT_LEVEL, has_noise_units=self.whitening.has_noise_units, largest=self.largest
+        )
         covered = nearest(where, is_object.shape)[is_object]
         return float(covered.mean()) if covered.size else 1.0
 
@@ -217,6 +224,14 @@ class MapMaker:
 def _inverse_size(maps: NDArray[Any]) -> NDArray[np.float32]:
     size = np.sqrt(np.sum(np.abs(maps) ** 2, axis=0, dtype=np.float64))
     return np.divide(1.0, size, out=np.zeros_like(size), where=size > 0).astype(np.float32)
+
+
+def largest_power(blocks: Iterable[NDArray[Any]], whitening: Whitening) -> float:
+    """Largest sum over the coils of |m_c|^2 at any low-resolution pixel of any block."""
+    return max(
+        float(np.sum(np.abs(low_resolution_images(whitening.apply(block))) ** 2, axis=0).max())
+        for block in blocks
+    )
 
 
 def squared_gain(pairs: list[tuple[NDArray[Any], Compression]], whitening: Whitening) -> float:

@@ -124,6 +124,14 @@ def test_the_report_stays_small_and_names_readout_positions() -> None:
     assert sum("objective" in plane for plane in report["solver"]["planes"]) <= 16
 
 
+def test_positions_beyond_the_ends_of_the_object_are_no_fault_of_the_maps() -> None:
+    found = volume((20, 22, 40))
+    report = reconstruct(found.scan, QUICK.model_copy(update={"max_iterations": 1})).report
+    shares = [each["object_share"] for each in report["preparation"]["coil_maps"]["slices"]]
+    assert shares[:4] == [1.0] * 4
+    assert min(shares) < 1.0
+
+
 def test_residual_of_a_volume_is_as_large_as_its_noise() -> None:
     """Fully sampled without penalties, an image explains one of C coils' combinations: C - 1 of them are left."""
     found = volume(SMALL, mask=np.ones(SMALL[:2], bool))
