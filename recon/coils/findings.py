@@ -76,12 +76,18 @@ def map_findings(figures: Mapping[int, MapFigures], axis: str = "slice") -> list
     found: list[Finding] = []
     if poor:
         worst = min(poor, key=lambda position: poor[position])
+        is_supplied = figures[worst].source == "supplied"
+        remedy = (
+            "correct /sensitivity or leave it out"
+            if is_supplied
+            else "sample more of the centre, try adaptive maps, or supply some"
+        )
         found.append(
             Finding(
                 "maps-incomplete",
                 "error" if poor[worst] == 0 else "warning",
                 f"The coil maps of {len(poor)} {planes} leave out part of the object ({1 - poor[worst]:.0%} of {axis} "
-                f"{worst}), and the image is zero there: sample more of the centre, try adaptive maps, or supply some.",
+                f"{worst}), and the image is zero there: {remedy}.",
                 f"{axis} {worst}",
                 {"slices": len(poor), "smallest_share": poor[worst]},
             )

@@ -28,6 +28,8 @@ from recon.scan import Scan
 MapMethod = Literal["eigenvector", "adaptive", "supplied", "single-coil"]
 #: the object, for the mean that defines noise units: pixels above this fraction of the largest magnitude.
 OBJECT_LEVEL: Final = 0.1
+#: and no object at all where fewer than this share of the pixels are.
+SMALLEST_OBJECT: Final = 0.005
 
 
 @dataclass(frozen=True)
@@ -143,7 +145,7 @@ class MapMaker:
         Raises
         ------
         InvalidScan
-            When supplied maps are zero everywhere.
+            When supplied maps are zero everywhere, or wherever the object is.
         """
         blocks = [self.compression.apply(self.whitening.apply(block)) for block in calibration.blocks]
         if self.method == "supplied":
@@ -191,7 +193,8 @@ class MapMaker:
             blocks, OBJECT_LEVEL, has_noise_units=self.whitening.has_noise_units, largest=self.largest
         )
         covered = nearest(where, is_object.shape)[is_object]
-        return float(covered.mean()) if covered.size else 1.0
+        # a few pixels are chance, in a slice without an object
+        return float(covered.mean()) if covered.size > SMALLEST_OBJECT * is_object.size else 1.0
 
     def _object_share(
         self, calibration: Calibration, blocks: list[NDArray[Any]], inside: NDArray[np.bool_]
@@ -216,6 +219,11 @@ class MapMaker:
         physical = physical / np.abs(physical).max()  # so that squares stay in range
         whitened = self.whitening.apply(physical * _inverse_size(physical))
         share = self._object_share(calibration, blocks, np.any(physical != 0, axis=0))
+        if share == 0:
+            raise InvalidScan(
+                f"/sensitivity of slice {position} is zero everywhere the scan shows an object: write maps of this "
+                f"object in its place and orientation, or leave them out"
+            )
         return CoilMaps(
             self.compression.apply(whitened), whitened, MapFigures("supplied", object_share=share)
         )

@@ -50,6 +50,23 @@ def test_one_coil_uses_the_map_that_is_supplied(method: str) -> None:
     assert np.linalg.norm(mapped.image - plain) > 0.3 * np.linalg.norm(plain)
 
 
+def test_supplied_maps_are_held_against_the_object() -> None:
+    """Zero wherever the object is: refused; zero in a part of it: a finding that speaks of the maps."""
+    found = example()
+    maps = np.ones((4, 48, 44), np.complex64)
+    maps[:, 2:46, 2:42] = 0
+    beside = replace(found.scan, sensitivity_array=LabelledArray(maps, ("coil", "y", "x")))
+    with pytest.raises(InvalidScan, match="place and orientation"):
+        reconstruct(beside)
+    maps[:, :24] = 1
+    half = replace(found.scan, sensitivity_array=LabelledArray(maps, ("coil", "y", "x")))
+    report = reconstruct(half, Settings(max_iterations=3)).report
+    (finding,) = [finding for finding in report["findings"] if finding["code"] == "maps-incomplete"]
+    assert "correct /sensitivity" in finding["message"]
+    assert finding["numbers"]["smallest_share"] == pytest.approx(0.5, abs=0.15)
+    assert report["preparation"]["coil_maps"]["source"] == "supplied"
+
+
 @pytest.mark.parametrize("scale", [1e-4, 1e-2, 1.0, 1e4])
 def test_scale_of_the_reference_does_not_matter(scale: float) -> None:
     """A separate calibration may have any receiver gain."""
