@@ -22,6 +22,7 @@ from recon.findings import Finding
 from recon.formats.image_layout import voxel_size_mm
 from recon.grid import image_grid
 from recon.levels import ChannelLevels
+from recon.repeatability import Scatter, scatter_findings
 from recon.sampling import (
     FrameUnion,
     SamplingFacts,
@@ -48,7 +49,7 @@ class Inspection:
         Length of every k-space axis.
     sampling : dict
         `sampled_fraction` (of the positions), `net_acceleration` (positions of all averages over samples),
-        `readouts` (of all planes and averages),
+        `readouts` (of all planes and averages), `scatter_over_noise` (of averages, in variance),
         `nominal_acceleration`, `calibration` (rows, columns), `time_average_calibration` (of all frames together; null
         without frames), `peak_side_lobe`, `distinct_masks`,
         `varies_along_readout` (or along the columns of a phase-phase plane), `samples_per_position` (averages),
@@ -100,6 +101,7 @@ class Inspector:
         self.largest = 0.0
         self.levels = ChannelLevels(scan.coils)
         self.spikes = SpikeCount(scan.plane_axes)
+        self.scatter = Scatter(scan.coils)
 
     def read(self, index: PlaneIndex) -> Samples:
         """Read one plane, look at it, and return the mean of its averages.
@@ -109,12 +111,14 @@ class Inspector:
         InvalidScan
             For NaN or Inf, and for a plane without any sampled position.
         """
-        mean = Mean()
+        mean, before = Mean(), self.levels.energy.copy()
         for average, (kspace, mask) in enumerate(self.source.each_average(index)):
             self._see(index, average, kspace, mask)
             mean.add(kspace, mask)
         samples = mean.finish()
         self._count(index, samples)
+        if self.scan.averages > 1 and self.largest <= LARGEST_VALUE:
+            self.scatter.see(self.levels.energy - before, samples)
         return samples
 
     def _count(self, index: PlaneIndex, samples: Samples) -> None:
@@ -179,6 +183,7 @@ class Inspector:
             )
         check_finite(scan)
         channels = self.levels.judge(scan.noise())
+        scatter = self.scatter.over_noise(scan)
         grid = image_grid(scan)
         encoded = scan.plane_shape[1]
         solved = encoded if self.sampling.varies_along_columns or scan.is_volume else cropped_readout(scan)
@@ -191,6 +196,7 @@ class Inspector:
                 **self.sampling.as_dict(),
                 "time_average_calibration": self._time_average,
                 "readouts": self.readouts,
+                "scatter_over_noise": scatter,
                 **coverage_facts(self._coverage(), _fields_mm(scan)),
             },
             objects={
@@ -210,6 +216,7 @@ class Inspector:
             findings=[
                 *scan.findings,
                 *self._findings(),
+                *scatter_findings(scatter),
                 *channels.findings(),
                 *self.spikes.findings(),
             ],

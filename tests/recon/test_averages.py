@@ -262,3 +262,30 @@ def test_weights_pay_where_counts_differ(monkeypatch: pytest.MonkeyPatch) -> Non
     load = Preparation.load
     monkeypatch.setattr(Preparation, "load", lambda self, index: load(self, index)._replace(weights=None))
     assert weighted < 0.6 * error(reconstruct(scan, settings).image, found)
+
+
+def test_scatter_of_averages_is_their_noise() -> None:
+    """Source: statistics: the variance within positions is that of the noise, whatever the object."""
+    scan, _, _ = repeated(centre_repeated())
+    assert inspect(scan).sampling["scatter_over_noise"] == pytest.approx(1, abs=0.06)
+    noise = scan.noise_array
+    assert noise is not None
+    faster = replace(
+        scan,
+        noise_array=LabelledArray(2 * np.asarray(noise.data), noise.labels),
+        attributes={"sample_time_us": 8.0},
+        noise_attributes={"sample_time_us": 2.0},
+    )
+    assert inspect(faster).sampling["scatter_over_noise"] == pytest.approx(1, abs=0.06)
+    assert inspect(example().scan).sampling["scatter_over_noise"] is None
+    assert inspect(replace(scan, noise_array=None)).sampling["scatter_over_noise"] is None
+
+
+@pytest.mark.parametrize("turn", [0.0, 0.3])
+def test_averages_that_disagree_are_reported(turn: float) -> None:
+    """A phase that drifts from average to average."""
+    scan, _, _ = repeated(centre_repeated())
+    phases = np.exp(1j * turn * np.arange(4)).reshape(-1, 1, 1, 1)
+    kspace = (np.asarray(scan.kspace_array.data) * phases).astype(np.complex64)
+    found = inspect(replace(scan, kspace_array=LabelledArray(kspace, AXES)))
+    assert ("averages-disagree" in [finding.code for finding in found.findings]) == (turn > 0)
