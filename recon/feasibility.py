@@ -28,6 +28,7 @@ def check_job(facts: Mapping[str, Any], settings: Settings) -> None:
         not fit.
     """
     _check_volume(facts, settings)
+    _check_constraint(settings)
     coils = int(facts["axes"].get("coil", 1))
     rule = settings.coil_compression
     wanted = getattr(rule, "coils", None)
@@ -120,6 +121,25 @@ def _check_adaptive(facts: Mapping[str, Any], settings: Settings) -> None:
             "/combination",
             "received adaptive for a volume whose mask varies along kx; accepted is adaptive where planes are combined "
             "one by one: choose root-sum-of-squares",
+        )
+
+
+def _check_constraint(settings: Settings) -> None:
+    """A constraint needs a method that can hold it, one image, and the phase of that image."""
+    received = settings.constraint
+    if received == "none":
+        return
+    if settings.method == "zero-filled" or (settings.method == "tikhonov" and received == "nonnegative"):
+        _refuse(
+            "/constraint",
+            f"received {received} with the method {settings.method}; accepted is none with zero-filled, none or real "
+            f"with tikhonov, any with compressed-sensing: choose another method or constraint",
+        )
+    if settings.map_sets > 1:
+        _refuse(
+            "/constraint",
+            f"received {received} with map_sets {settings.map_sets}; accepted is a constraint with one set of maps: "
+            f"set map_sets to 1, or constraint to none",
         )
 
 

@@ -8,6 +8,7 @@ from typing import Any, Protocol
 from recon.joint_full import FullVolumes
 from recon.joint_hybrid import HybridVolumes
 from recon.joint_problem import solve_volume, stack_maps
+from recon.phase import remove_phase
 from recon.preparation import Preparation, Sink
 from recon.report import SolverFigures, build_report
 from recon.scan import PlaneIndex
@@ -48,12 +49,13 @@ def run_joint(
             space.finish(volume, space.zero_filled(volume), sink)
         else:
             encoding, data = space.measure(volume)
+            if preparation.settings.constraint != "none":
+                encoding = remove_phase(encoding, data)
             callback = tell.iteration(volume, preparation.settings)
             solution = solve_volume(preparation, encoding, data, callback)
-            del encoding, data
             solver.see([volume], solution)
-            u = solution.image
-            del solution
+            u = encoding.with_phase(solution.image)
+            del encoding, data, solution
             tell("consistency")
             space.finish(volume, u, sink)
         tell("write")

@@ -80,6 +80,8 @@ def make_problem(preparation: Preparation, encoding: Encoding, data: NDArray[Any
         float(settings.wavelet_strength),
         float(settings.tv_strength),
         weights=voxel_weights(preparation.volume.scan),
+        wavelet_shifts=settings.wavelet_shifts,
+        constraint=settings.constraint,
     )
 
 
@@ -92,7 +94,13 @@ def solve_volume(
     if settings.method == "tikhonov":
         strength = float(settings.tikhonov_strength)
         return tikhonov(
-            encoding, data, strength, tolerance=tolerance, max_iterations=max_iterations, callback=callback
+            encoding,
+            data,
+            strength,
+            tolerance=tolerance,
+            max_iterations=max_iterations,
+            callback=callback,
+            is_real=settings.constraint == "real",
         )
     problem = make_problem(preparation, encoding, data)
     return solve(problem, tolerance=tolerance, max_iterations=max_iterations, callback=callback)

@@ -227,3 +227,37 @@ def scale(x: Real, factor: Real) -> None:
             else:
                 for j in range(width):
                     row[j] *= weights[0]
+
+
+@compiled
+def ascend_coefficients(q: Real, c: Real, step: Any, radius: Any, corner: tuple[int, int, int]) -> None:
+    """q = projection of q + step c onto |q| <= radius, in place; zero in the approximation corner."""
+    slabs, rows, width = q.shape
+    for s in range(slabs):
+        for i in range(rows):
+            a, b = q[s, i], c[s, i]
+            skip = corner[2] if s < corner[0] and i < corner[1] else 0
+            a[: 2 * skip] = 0
+            for j in range(skip, width // 2):
+                re, im = a[2 * j] + step * b[2 * j], a[2 * j + 1] + step * b[2 * j + 1]
+                scale = radius / max(np.sqrt(re * re + im * im), radius)
+                a[2 * j] = re * scale
+                a[2 * j + 1] = im * scale
+
+
+@compiled
+def coefficient_sums(q: Real, c: Real, corner: tuple[int, int, int]) -> tuple[float, float]:
+    """Sum of |c| outside the approximation corner, and Re <q, c>."""
+    slabs, rows, width = q.shape
+    size, product = 0.0, 0.0
+    for s in range(slabs):
+        for i in range(rows):
+            a, b = q[s, i], c[s, i]
+            skip = corner[2] if s < corner[0] and i < corner[1] else 0
+            part, dot = b[0] * 0, b[0] * 0
+            for j in range(skip, width // 2):
+                part += np.sqrt(b[2 * j] * b[2 * j] + b[2 * j + 1] * b[2 * j + 1])
+                dot += a[2 * j] * b[2 * j] + a[2 * j + 1] * b[2 * j + 1]
+            size += part
+            product += dot
+    return size, product

@@ -59,6 +59,7 @@ def tikhonov(
     tolerance: float,
     max_iterations: int,
     callback: Callable[[int, float], None] | None = None,
+    is_real: bool = False,
 ) -> Solution:
     """Minimise 1/2 ||E u - d||^2 + strength/2 ||u||^2 by conjugate gradients (Hestenes & Stiefel 1952).
 
@@ -73,12 +74,16 @@ def tikhonov(
         Weight in noise units.
     tolerance, max_iterations, callback
         As for `recon.solver.solve`.
+    is_real : bool
+        Whether u is real: then all gradients are of their real parts.
 
     Returns
     -------
     Solution
     """
     b = encoding.adjoint(data)
+    if is_real:
+        b.imag = 0
     x, r = np.zeros_like(b), b.copy()
     p, rho = r.copy(), norm(r) ** 2
     scale, energy = np.sqrt(rho), norm(data) ** 2
@@ -87,6 +92,8 @@ def tikhonov(
     iteration = 0
     while optimality >= tolerance and iteration < max_iterations:
         q = encoding.normal(p) + b.real.dtype.type(strength) * p
+        if is_real:
+            q.imag = 0
         alpha = rho / inner(p, q).real
         x += b.real.dtype.type(alpha) * p
         r -= b.real.dtype.type(alpha) * q

@@ -94,12 +94,19 @@ def _solve(
         encoding, data = measurement(preparation, maps, planes)
         strength = float(settings.tikhonov_strength)
         solution = tikhonov(
-            encoding, data, strength, tolerance=tolerance, max_iterations=max_iterations, callback=callback
+            encoding,
+            data,
+            strength,
+            tolerance=tolerance,
+            max_iterations=max_iterations,
+            callback=callback,
+            is_real=settings.constraint == "real",
         )
     else:
         problem = make_problem(preparation, maps, planes)
+        encoding = problem.encoding
         solution = solve(problem, tolerance=tolerance, max_iterations=max_iterations, callback=callback)
-    return solution.image, solution
+    return encoding.with_phase(solution.image), solution
 
 
 def finish_plane(

@@ -10,6 +10,7 @@ from numpy.typing import NDArray
 from recon.coils.maps import CoilMaps
 from recon.operators.encoding import Encoding
 from recon.operators.folded import FoldedEncoding
+from recon.phase import remove_phase
 from recon.preparation import Plane, Preparation
 from recon.solver import Problem
 
@@ -30,9 +31,17 @@ def measurement(
     Returns
     -------
     encoding : Encoding
+        With the low-resolution phase of the image taken out where the image is constrained (see `recon.phase`).
     data : complex64 ndarray
         In the range of `encoding`.
     """
+    encoding, data = _measured(preparation, maps, planes)
+    if preparation.settings.constraint != "none":
+        encoding = remove_phase(encoding, data)
+    return encoding, data
+
+
+def _measured(preparation: Preparation, maps: CoilMaps, planes: list[Plane]) -> tuple[Encoding, NDArray[Any]]:
     scaled = maps.virtual / np.float32(preparation.kappa)
     if maps.virtual.ndim == 4:
         ((samples, mask, weights, position),) = planes
@@ -63,4 +72,6 @@ def make_problem(preparation: Preparation, maps: CoilMaps, planes: list[Plane]) 
         float(settings.tv_strength),
         float(settings.temporal_strength) if is_series else 0.0,
         float(settings.low_rank_strength) if is_series else 0.0,
+        wavelet_shifts=settings.wavelet_shifts,
+        constraint=settings.constraint,
     )

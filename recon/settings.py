@@ -115,6 +115,12 @@ class Settings(BaseModel):
         Weight of 1/2 ||u||^2 in noise units, used by the method `tikhonov`.
     wavelet : str
         One of `WAVELETS`.
+    wavelet_shifts : int
+        S of cycle spinning: the wavelet term is the mean over S fixed circular shifts; 1 is none. Each shift adds about
+        a quarter to the time of an iteration.
+    constraint : {"none", "real", "nonnegative"}
+        On the image without its low-resolution phase, which comes from the centre of its own k-space and is put back
+        into the image written. `tikhonov` takes `real`.
     coil_maps : {"auto", "eigenvector", "adaptive", "supplied"}
         `auto`: the supplied maps when the scan holds `/sensitivity`, else eigenvector maps.
     map_sets : {1, 2}
@@ -148,6 +154,8 @@ class Settings(BaseModel):
     wavelet: Annotated[str, BeforeValidator(_wavelet), Field(json_schema_extra={"enum": list(WAVELETS)})] = (
         "db4"
     )
+    wavelet_shifts: int = Field(default=1, ge=1, le=16, strict=True)
+    constraint: Literal["none", "real", "nonnegative"] = "none"
     coil_maps: Literal["auto", "eigenvector", "adaptive", "supplied"] = "auto"
     map_sets: int = Field(default=1, ge=1, le=2, strict=True)
     coil_compression: Annotated[

@@ -1,7 +1,11 @@
 """Accelerated proximal gradient for the wavelet-l1 + total-variation problem.
 
-    minimise over u   1/2 ||E u - d||^2 + 1/2 ||u outside the maps||^2 + lambda_w ||W u~||_1 (details)
+    minimise over u   1/2 ||E u - d||^2 + 1/2 ||u outside the maps||^2 + lambda_w / S sum_s ||W T_s u~||_1 (details)
                       + lambda_t TV(u) + lambda_f TV_frames(u) + lambda_r ||u||_*
+    subject to        nothing, or u~ real, or u~ real and u >= 0
+
+T_s are circular shifts of u~ (see `recon.shifts`); S is 1 unless cycle spinning is asked for. Of the wavelet terms the
+first is exact inside the proximal map; the other shifts, and with u >= 0 all of them, are dual fields like that of TV.
 
 u is a plane, a volume (TV isotropic over three axes, W along all of them) or a series of planes (TV and W in each
 frame; total variation along the frames and the nuclear norm of the matrix (frame, pixel) join the frames).
@@ -11,11 +15,10 @@ the data term), so nothing is assumed about what lies beyond the border. Sizes t
 
 Method: proximal gradient with momentum. The momentum is the whole last step until it points uphill, and then starts
 anew (greedy FISTA of Liang, Luo & Schoenlieb 2022, with the step 1/L; restart by O'Donoghue & Candes 2015): it needs
-20 to 35 % fewer iterations here than the growing momentum of FISTA (Beck & Teboulle 2009). An
-objective above that of the empty image starts it anew as well, so that a plain step, which cannot fail, follows. The
-proximal map of the two penalties together has no closed form: for a dual field p of the TV term the wavelet part is
-exact, so one or a few projected-gradient steps on p, warm-started from the previous iteration, are enough (Beck &
-Teboulle 2009, TV).
+20 to 35 % fewer iterations here than the growing momentum of FISTA (Beck & Teboulle 2009), but can run in circles where
+the proximal map is not exact: then FISTA's, with the same restart, takes over for good. The proximal map of all
+penalties together has no closed form: for a dual field p of the TV term the wavelet part is exact, so one or a few
+projected-gradient steps on p, warm-started from the previous iteration, are enough (Beck & Teboulle 2009, TV).
 All gradients are of the quadratic form, so the gradient at the extrapolated point is the same extrapolation of two
 known gradients: one normal operator for each iteration, and none for the optimality residual.
 """
@@ -35,17 +38,19 @@ from recon.operators.base import inner, norm
 from recon.operators.encoding import Encoding
 from recon.operators.wavelet import Wavelet
 from recon.penalties import nuclear_norm, project_spectral
+from recon.shifts import ShiftedWavelets, shift_set
 
 #: dual steps for each proximal map to begin with: on simulated scans of two heads, fifteen saved no iteration.
 DUAL_STEPS: Final = 1
 #: one step more whenever the optimality has not fallen by a fifth in this many iterations; and no more than so many.
 PATIENCE: Final = 10
 MOST_DUAL_STEPS: Final = 4
-#: share of the last step that is added to the next; 1 until the restart criterion stops it.
-MOMENTUM: Final = 1.0
+#: the same where wavelet terms have dual fields too.
+MOST_DUAL_STEPS_WITH_SHIFTS: Final = 12
 #: step of the dual gradient as a fraction of 1 / ||K||^2, K being all operators inside the dual terms; 2 is its limit.
 DUAL_STEP: Final = 1.9
 
+Constraint = Literal["none", "real", "nonnegative"]
 StopReason = Literal["optimal", "iteration-limit", "nothing-to-solve"]
 
 
@@ -63,6 +68,10 @@ class Problem:
         lambda_w, lambda_t, lambda_f and lambda_r, in noise units; the last two for a series alone.
     weights : (float, float, float)
         Weights of the differences along slabs, rows and columns: for a volume whose voxels are not cubes.
+    wavelet_shifts : int
+        S; more than 2^levels shifts do not differ and are left out.
+    constraint : {"none", "real", "nonnegative"}
+        On the image that `encoding` acts on: a phase is taken out of it by `Encoding.absorb`.
     """
 
     encoding: Encoding
@@ -73,6 +82,8 @@ class Problem:
     temporal_strength: float = 0.0
     low_rank_strength: float = 0.0
     weights: tuple[float, float, float] = (1.0, 1.0, 1.0)
+    wavelet_shifts: int = 1
+    constraint: Constraint = "none"
 
 
 @dataclass(frozen=True)
@@ -82,8 +93,8 @@ class Solution:
     Attributes
     ----------
     image : complex ndarray
-        u, in noise units.
-    padded, dual, low_rank_dual : ndarray
+        What the problem's encoding acts on, in noise units (see `Encoding.with_phase`).
+    padded, dual, low_rank_dual, shift_duals : ndarray
         Full primal and dual state, for warm starts.
     objective : list of float
         Objective after each iteration.
@@ -101,6 +112,7 @@ class Solution:
     optimality: float
     iterations: int
     stop_reason: StopReason
+    shift_duals: NDArray[Any] | None = None
 
 
 def solve(
@@ -164,8 +176,10 @@ class _Iteration:
         self.padded_shape = self.transform.domain_shape if self.wavelet_strength > 0 else self.shape
         self.window = tuple(slice(0, n) for n in self.shape)
 
-        self.b = self._embed(encoding.adjoint(problem.data))
+        self.is_real, self.is_nonnegative = problem.constraint != "none", problem.constraint == "nonnegative"
+        self.b = self._embed(self._projected(encoding.adjoint(problem.data)))
         self.real = self.b.real.dtype.type
+        self._set_shifts(start)
         self._set_variation(is_volume)
         self.data_energy = norm(problem.data) ** 2
         self.scale = norm(self.b)
@@ -177,13 +191,38 @@ class _Iteration:
         if problem.low_rank_strength > 0:
             known = None if start is None else start.low_rank_dual
             self.q = np.zeros(self.shape, self.b.dtype) if known is None else known.copy()
+        for array in (self.x, self.p, self.q):
+            if array is not None:
+                self._projected(array)  # a start may come from a problem without the constraint
         self.hx = self._normal(self.x)
         self.x_before, self.hx_before = self.x, self.hx
         self.dual_steps = DUAL_STEPS
+        self.is_greedy, self.t = True, 1.0
         self.best, self.since_best = np.inf, 0
         self.iterations = 0
         self.optimality = np.inf
         self.objective: list[float] = []
+
+    def _set_shifts(self, start: Solution | None) -> None:
+        """Split the wavelet term into the one that is exact and those with dual fields."""
+        problem, self.shifted = self.problem, None
+        if self.wavelet_strength == 0:
+            return
+        shifts = shift_set(self.transform, problem.wavelet_shifts)
+        share = self.wavelet_strength / len(shifts)
+        # the proximal map of the exact term does not go with u >= 0
+        self.wavelet_strength = 0.0 if self.is_nonnegative else share
+        rest = shifts if self.is_nonnegative else shifts[1:]
+        if rest:
+            known = None if start is None or start.shift_duals is None else start.shift_duals.copy()
+            self.shifted = ShiftedWavelets(
+                self.transform,
+                rest,
+                share,
+                frames=self.encoding.depth == "series",
+                dtype=self.b.dtype,
+                known=None if known is None else self._projected(known),
+            )
 
     def _set_variation(self, is_volume: bool) -> None:
         """Weights and radii of the dual field; a term of strength zero has weight zero, so its field stays zero."""
@@ -198,12 +237,15 @@ class _Iteration:
         self.weights = np.array(weights, self.real)
         self.radius, self.slab_radius = self.real(inside or 1.0), self.real(along or 1.0)
         squared_norm = 4 * sum(weight**2 for weight in weights) + (1 if problem.low_rank_strength > 0 else 0)
+        squared_norm += 0 if self.shifted is None else len(self.shifted.shifts)
         self.has_dual = squared_norm > 0
         self.dual_step = DUAL_STEP / squared_norm if self.has_dual else 0.0
 
     def step(self) -> None:
         """One accelerated proximal-gradient step with restart, and the optimality residual at its end."""
-        beta, step = self.real(MOMENTUM), self.real(1 / self.lipschitz)
+        t_next = (1 + np.sqrt(1 + 4 * self.t**2)) / 2
+        beta = self.real(1.0 if self.is_greedy else (self.t - 1) / t_next)
+        step = self.real(1 / self.lipschitz)
         state = (_flat(self.x), _flat(self.x_before), _flat(self.hx), _flat(self.hx_before), _flat(self.b))
         v = np.empty_like(self.b)
         kernels.extrapolated_step(*state, beta, step, _flat(v))
@@ -231,8 +273,11 @@ class _Iteration:
         if self.optimality < 0.8 * self.best:
             self.best, self.since_best = self.optimality, 0
         elif self.since_best >= PATIENCE:
-            self.dual_steps, self.since_best = min(self.dual_steps + 1, MOST_DUAL_STEPS), 0
-        is_uphill = restart > 0 or objective > 0.5 * self.data_energy
+            most = MOST_DUAL_STEPS if self.shifted is None else MOST_DUAL_STEPS_WITH_SHIFTS
+            self.is_greedy = self.is_greedy and self.dual_steps < MOST_DUAL_STEPS
+            self.dual_steps, self.since_best = min(self.dual_steps + 1, most), 0
+        is_uphill = restart > 0
+        self.t = 1.0 if self.is_greedy or is_uphill else t_next
         self.x_before, self.hx_before = (x, hx) if is_uphill else (self.x, self.hx)
         self.x, self.hx = x, hx
         self.iterations += 1
@@ -242,24 +287,29 @@ class _Iteration:
         x = np.empty_like(v)
         if not self.has_dual:
             x[...] = v
-            return x, 0.0, self._prox_wavelet(x)
+            return x, 0.0, self._prox_exact(x)
         # the dual fields are kept free of the step: they are bounded by the strengths, and enter divided by L
         p, sigma = _deep_field(self.p), self.real(self.dual_step * self.lipschitz)
         for _ in range(self.dual_steps):
             self._minus_dual(v, x)
-            self._prox_wavelet(x)
+            self._prox_exact(x)
             kernels.ascend_dual(
                 p, _deep(x), sigma, self.weights, self.radius, self.slab_radius, self.is_joint
             )
             if self.q is not None:
                 self.q = project_spectral(self.q + sigma * x[self.window], self.problem.low_rank_strength)
+            if self.shifted is not None:
+                self.shifted.ascend(x, sigma)
         self._minus_dual(v, x)
-        cost = self._prox_wavelet(x)
+        cost = self._prox_exact(x)
         inside, along, product = kernels.variation_sums(p, _deep(x), self.weights, self.is_joint)
         penalty = float(self.radius) * inside + float(self.slab_radius) * along
         if self.q is not None:
             penalty += self.problem.low_rank_strength * nuclear_norm(x[self.window])
             product += inner(self.q, np.ascontiguousarray(x[self.window])).real
+        if self.shifted is not None:
+            size, dot = self.shifted.sums(x)
+            penalty, product = penalty + size, product + dot
         return x, penalty - product, cost + penalty
 
     def _minus_dual(self, v: NDArray[Any], out: NDArray[Any]) -> None:
@@ -268,9 +318,14 @@ class _Iteration:
         kernels.subtract_divergence(_deep(v), _deep_field(self.p), inverse, self.weights, _deep(out))
         if self.q is not None:
             out[self.window] -= inverse * self.q
+        if self.shifted is not None:
+            out -= inverse * self.shifted.sum
 
-    def _prox_wavelet(self, x: NDArray[Any]) -> float:
-        """Exact proximal map of the wavelet term with step 1/L, in place; returns its value."""
+    def _prox_exact(self, x: NDArray[Any]) -> float:
+        """Exact proximal map, in place, of the wavelet term with step 1/L, or of u >= 0; returns the term's value."""
+        if self.is_nonnegative:
+            inside = x[self.window].real
+            np.maximum(inside, 0, out=inside)
         if self.wavelet_strength == 0:
             return 0.0
         real, (low, high) = _deep(x), self.transform.filters(self.b.dtype)
@@ -284,7 +339,13 @@ class _Iteration:
         return self.wavelet_strength * size
 
     def _normal(self, x: NDArray[Any]) -> NDArray[Any]:
-        return self._embed(self.encoding.normal(x[self.window]))
+        return self._embed(self._projected(self.encoding.normal(x[self.window])))
+
+    def _projected(self, image: NDArray[Any]) -> NDArray[Any]:
+        """The real part, in place, where the image is constrained to it: all that follows then stays real."""
+        if self.is_real:
+            image.imag = 0
+        return image
 
     def _embed(self, image: NDArray[Any]) -> NDArray[Any]:
         if self.padded_shape == self.shape:
@@ -304,6 +365,7 @@ class _Iteration:
             optimality=0.0 if reason == "nothing-to-solve" else float(self.optimality),
             iterations=self.iterations,
             stop_reason=reason,
+            shift_duals=None if self.shifted is None else self.shifted.fields,
         )
 
 

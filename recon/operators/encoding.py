@@ -14,6 +14,7 @@ columns once, and F acts along the other axes alone.
 
 from __future__ import annotations
 
+import copy
 from typing import Any, Literal
 
 import numpy as np
@@ -46,6 +47,10 @@ class Encoding(LinearOperator):
     ----------
     axes : tuple of int
         Transformed axes; without -1 the range is hybrid space (columns in image space).
+    weight : float ndarray
+        w, with one column where all columns share it.
+    phase : complex ndarray or None
+        e^{i phi} of the image's shape, see `absorb`.
     """
 
     def __init__(
@@ -56,6 +61,7 @@ class Encoding(LinearOperator):
         weights: NDArray[Any] | None = None,
     ) -> None:
         self.maps = np.ascontiguousarray(maps)
+        self.phase: NDArray[Any] | None = None
         is_plane = maps.ndim == 3
         self.depth: Depth = "series" if is_plane else depth
         real = maps.real.dtype
@@ -66,43 +72,58 @@ class Encoding(LinearOperator):
         )  # fmt: skip
         self.domain_shape = maps.shape[1:] if is_plane else mask.shape
         self.range_shape = (len(maps), *self.domain_shape)
-        self._weight = weight[..., :1] if has_complete_readouts else weight
+        self.weight = weight[..., :1] if has_complete_readouts else weight
         # A shift of the image multiplies k-space by a phase, which the mask leaves alone: so the normal operator
         # needs no shifts of the image, only the mask (the squared weights) in the order of the plain FFT.
         # It holds the scale of the inverse transform as well.
         count = np.prod([self.domain_shape[axis] for axis in self.axes])
-        plain = np.fft.ifftshift(self._weight**2, axes=self.axes) / real.type(count)
+        plain = np.fft.ifftshift(self.weight**2, axes=self.axes) / real.type(count)
         self._plain_mask = np.ascontiguousarray(plain if not is_plane else plain[np.newaxis])
         self._deep_maps = self.maps[:, np.newaxis] if is_plane else self.maps
         outside = ~np.any(maps != 0, axis=0)
         self._outside = np.broadcast_to(outside, self.domain_shape).astype(real) if outside.any() else None
 
+    def absorb(self, phase: NDArray[Any]) -> Encoding:
+        """The same measurement of v, u = e^{i phi} v: E' = E diag(e^{i phi}); `phase` is e^{i phi}."""
+        encoding = copy.copy(self)
+        encoding.phase = np.asarray(phase, self.maps.dtype)
+        return encoding
+
+    def with_phase(self, image: NDArray[Any]) -> NDArray[Any]:
+        """u of v: the image with the phase that was taken out of it, if any was."""
+        return image if self.phase is None else self.phase * image
+
     def to_range(self, kspace: NDArray[Any]) -> NDArray[Any]:
         """Weighted k-space, coil first and zero where not sampled, in the space that `forward` maps to."""
         data = kspace if -1 in self.axes else inverse_transform(kspace, (-1,))
-        return np.where(self._weight != 0, data * self._weight, 0)
+        return np.where(self.weight != 0, data * self.weight, 0)
 
     def to_kspace(self, data: NDArray[Any]) -> NDArray[Any]:
         """The inverse of `to_range`: k-space, coil first."""
         kspace = data if -1 in self.axes else transform(data, (-1,))
-        weight = self._weight
+        weight = self.weight
         return np.asarray(kspace * np.divide(1, weight, out=np.zeros_like(weight), where=weight != 0))
 
     def forward(self, x: NDArray[Any]) -> NDArray[Any]:
         """Image to sampled data, zero where not sampled."""
-        return np.asarray(transform(self.maps * x, self.axes) * self._weight)
+        x = x if self.phase is None else self.phase * x
+        return np.asarray(transform(self.maps * x, self.axes) * self.weight)
 
     def adjoint(self, y: NDArray[Any]) -> NDArray[Any]:
         """Sampled data to image."""
         out = np.zeros(self.domain_shape, y.dtype)
         for map_, samples in zip(self.maps, y, strict=True):
-            image = inverse_transform(samples * self._weight, self.axes)
+            image = inverse_transform(samples * self.weight, self.axes)
             image *= map_.conj()
             out += image
-        return out
+        return out if self.phase is None else np.conj(self.phase) * out
 
     def normal(self, x: NDArray[Any]) -> NDArray[Any]:
-        """E^H E x plus x outside the object, coil by coil so that each coil's plane stays in the cache."""
+        """E^H E x plus x outside the object."""
+        return self._normal(x) if self.phase is None else np.conj(self.phase) * self._normal(self.phase * x)
+
+    def _normal(self, x: NDArray[Any]) -> NDArray[Any]:
+        """`normal` without the phase, coil by coil so that each coil's plane stays in the cache."""
         x = np.ascontiguousarray(x)
         out = np.zeros_like(x) if self._outside is None else self._outside * x
         deep = x.reshape(-1, *x.shape[-2:])
@@ -133,7 +154,7 @@ class Encoding(LinearOperator):
     def squared_norm_bound(self) -> float:
         """Upper bound of ||E||^2, the outside included: max over pixels of sum_c |S_c|^2, times the largest w^2."""
         power = sum(np.abs(map_).astype(np.float64) ** 2 for map_ in self.maps)
-        largest = float(np.max(power)) * float(np.max(self._weight)) ** 2
+        largest = float(np.max(power)) * float(np.max(self.weight)) ** 2
         return largest if self._outside is None else max(largest, 1.0)
 
 

@@ -46,13 +46,13 @@ class FoldedEncoding(Encoding):
     def forward(self, x: NDArray[Any]) -> NDArray[Any]:
         """An image for each set to sampled data, zero where not sampled."""
         images = np.sum(self.sets * x[:, np.newaxis], axis=0)
-        return np.asarray(transform(images, self.axes) * self._weight)
+        return np.asarray(transform(images, self.axes) * self.weight)
 
     def adjoint(self, y: NDArray[Any]) -> NDArray[Any]:
         """Sampled data to an image for each set."""
         out = np.zeros(self.domain_shape, y.dtype)
         for coil, samples in enumerate(y):
-            image = inverse_transform(samples * self._weight, self.axes)
+            image = inverse_transform(samples * self.weight, self.axes)
             out += self.sets[:, coil].conj() * image
         return out
 
@@ -70,5 +70,5 @@ class FoldedEncoding(Encoding):
     def squared_norm_bound(self) -> float:
         """Upper bound of ||E||^2: the largest eigenvalue of S^H S, (set, set), at any pixel, times the largest w^2."""
         grams = np.einsum("jcyx,kcyx->yxjk", self.sets.conj(), self.sets)
-        largest = float(np.linalg.norm(grams, 2, axis=(-2, -1)).max()) * float(np.max(self._weight)) ** 2
+        largest = float(np.linalg.norm(grams, 2, axis=(-2, -1)).max()) * float(np.max(self.weight)) ** 2
         return largest if self._outside is None else max(largest, 1.0)
