@@ -280,7 +280,7 @@ def test_settings_that_the_scan_cannot_serve(tmp_path: Path) -> None:
         ({"max_iterations": "many"}, "/max_iterations"),
         ({"temporal_strength": -0.1}, "/temporal_strength"),
         ({"strength": 0.1}, "/strength"),
-        ({"constraint": "real"}, "/constraint"),
+        ({"constraint": "positive"}, "/constraint"),
         ({"seed": 1}, "/seed"),
     ],
 )
