@@ -142,6 +142,10 @@ class Inspector:
         parts = [f"{axis} {position}" for axis, position in place.items() if axis in self.scan.axes]
         return f" in {', '.join(parts)}" if parts else ""
 
+    def _along_readout(self, holds: NDArray[np.bool_]) -> NDArray[np.bool_]:
+        # zeros inside a measured readout are values; a readout, or a column of all of them, zero throughout is not
+        return holds if self.scan.plane_axes[1] != "kx" else readout_pattern(holds)
+
     def _see(
         self, index: PlaneIndex, average: int, kspace: NDArray[np.complex64], mask: NDArray[np.bool_]
     ) -> None:
@@ -155,7 +159,7 @@ class Inspector:
         outside = int((holds & ~mask).sum())
         self.outside += outside
         self.outside_planes += outside > 0
-        empty = int((mask & ~_along_readout(holds, self.source)).sum())
+        empty = int((mask & ~self._along_readout(holds)).sum())
         self.empty_positions += empty
         if empty and self.empty_first is None:
             self.empty_first = where.strip(" ,") or "the plane"
@@ -239,11 +243,6 @@ class Inspector:
                 calibration_findings(self.sampling.calibration, self._time_average, scan.plane_shape)
             )
         return found
-
-
-def _along_readout(holds: NDArray[np.bool_], scan: Scan) -> NDArray[np.bool_]:
-    # zeros inside a measured readout are values; a readout, or a column of all of them, that is zero throughout is not
-    return holds if scan.plane_axes[1] != "kx" else readout_pattern(holds)
 
 
 def _matrix(array: LabelledArray | None, axes: tuple[str, ...]) -> list[int] | None:

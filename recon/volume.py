@@ -66,12 +66,30 @@ class _Blocks:
 
 @dataclass
 class Slabs(Scan):
-    """A volume as a stack: each `kz` is one `slice` of (`ky`, `kx`)."""
+    """A volume as a stack: each `kz` is one `slice` of (`ky`, `kx`).
+
+    Attributes
+    ----------
+    columns : bool (kx) or None
+        What of each line was sampled, where the mask is inferred: a slab alone may hold too few lines to tell.
+    """
+
+    columns: NDArray[np.bool_] | None = None
 
     @property
     def keeps_readouts(self) -> bool:
         """See `Scan.keeps_readouts`: only complete ones can be transformed on their own."""
         return True
+
+    def _mask(
+        self, index: PlaneIndex, average: int, kspace: NDArray[np.complex64] | None = None
+    ) -> NDArray[np.bool_]:
+        if self.mask_array is not None:
+            return super()._mask(index, average, kspace)
+        data = self._kspace(index, average) if kspace is None else kspace
+        lines = np.any(data != 0, axis=(0, 2))
+        sampled = np.repeat(lines[:, np.newaxis], data.shape[2], axis=1)
+        return sampled if self.columns is None else sampled & self.columns
 
     def planes(self) -> list[PlaneIndex]:
         """Every slab, volume by volume, in the order that a file is read fastest."""

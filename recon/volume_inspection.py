@@ -43,6 +43,12 @@ class Pattern:
         if self.full is not None:
             self.full[kz] = counts > 0
 
+    def sampled(self, columns: NDArray[np.bool_]) -> int:
+        """Positions that the mask calls sampled, in some columns."""
+        if self.full is not None:
+            return int(self.full[..., columns].sum())
+        return int(np.count_nonzero(self.lines)) * int(columns.sum())
+
     def calibration(self) -> tuple[int, int, int]:
         """Sides (kz, ky, kx) of the fully sampled block about the centre."""
         return (
@@ -80,6 +86,16 @@ class VolumeInspector(Inspector):
         self.source = self.slabs = slabs(scan)
         self.spikes = SpikeCount(self.slabs.plane_axes)
         self.patterns: dict[Key, Pattern] = {}
+        self._held = np.zeros(scan.axes["kx"], np.bool_)
+
+    def _see(
+        self, index: PlaneIndex, average: int, kspace: NDArray[np.complex64], mask: NDArray[np.bool_]
+    ) -> None:
+        super()._see(index, average, kspace, mask)
+        self._held |= np.any(kspace != 0, axis=(0, 1))
+
+    def _along_readout(self, holds: NDArray[np.bool_]) -> NDArray[np.bool_]:
+        return np.asarray(holds.any(axis=1, keepdims=True))  # columns are judged by all slabs together
 
     def _count(self, index: PlaneIndex, samples: Samples) -> None:
         key = index.frame, index.contrast
@@ -98,6 +114,7 @@ class VolumeInspector(Inspector):
 
     def finish(self) -> Inspection:
         """See `Inspector.finish`."""
+        self._judge_columns()
         if any(pattern.full is not None for pattern in self.patterns.values()):
             self.union = None  # joint problems are calibrated from each volume's own centre
         varying = [pattern.full for pattern in self.patterns.values() if pattern.full is not None]
@@ -118,6 +135,23 @@ class VolumeInspector(Inspector):
         self.sampling.varies_along_columns = bool(varying)
         self.sampling.is_partial_echo = all(is_partial_echo(full) for full in varying)
         return super().finish()
+
+    def _judge_columns(self) -> None:
+        """Columns that hold nothing in any slab: not sampled where the mask is inferred, else a finding."""
+        if self._held.all() or not self._held.any():
+            return
+        if self.scan.mask_array is not None:
+            empty = sum(pattern.sampled(~self._held) for pattern in self.patterns.values())
+            if empty and self.empty_first is None:
+                self.empty_first = f"kx {int(np.argmin(self._held))}"
+            self.empty_positions += empty
+            return
+        self.slabs.columns = self._held
+        for pattern in self.patterns.values():
+            pattern.full = (pattern.lines > 0)[..., np.newaxis] & self._held
+        share = int(self._held.sum()), len(self._held)
+        self.sampling.sampled = self.sampling.sampled * share[0] // share[1]
+        self.sampling.samples = self.sampling.samples * share[0] // share[1]
 
     def _coverage(self) -> dict[str, Coverage]:
         columns = np.zeros(self.scan.axes["kx"], np.bool_)

@@ -150,6 +150,29 @@ def test_mask_missing_is_inferred_line_by_line() -> None:
     assert "mask-inferred" in codes
 
 
+def test_zeros_inside_lines_are_values_and_missing_ends_of_all_lines_are_not() -> None:
+    """Quantised data hold zeros by chance; a partial echo leaves the same end out of every line."""
+    found = volume(SMALL, coils=1, has_mask=False)
+    quantised = found.kspace.copy()
+    quantised[:, :, :, 3] *= np.random.default_rng(0).random(SMALL[:2]) < 0.5
+    axes = ("coil", "kz", "ky", "kx")
+    facts = inspect(Scan(LabelledArray(quantised, axes))).sampling
+    assert not facts["varies_along_readout"]
+    assert facts["sampled_fraction"] == pytest.approx(found.mask.mean())
+    quantised[..., :5] = 0
+    partial = Scan(LabelledArray(quantised, axes))
+    facts = inspect(partial).sampling
+    assert facts["varies_along_readout"]
+    assert facts["sampled_fraction"] == pytest.approx(found.mask.mean() * 15 / 20)
+    with pytest.raises(InvalidSettings, match="choose joint"):
+        reconstruct(partial, QUICK)
+    report = reconstruct(partial, QUICK.model_copy(update={"volume": "joint"})).report
+    assert "partial-echo" in [finding["code"] for finding in report["findings"]]
+    masked = Scan(LabelledArray(quantised, axes), mask_array=LabelledArray(found.mask, ("kz", "ky")))
+    (empty,) = [finding for finding in inspect(masked).findings if finding.code == "sampled-zeros"]
+    assert empty.numbers["positions"] == 5 * found.mask.sum()
+
+
 def test_facts_are_those_of_the_plane_of_phase_encodes() -> None:
     found = volume(SMALL, oversampling=2, attributes={"field_of_view_mm": [80.0, 36.0, 48.0]})
     facts = inspect(found.scan).as_dict()
