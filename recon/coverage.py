@@ -120,7 +120,8 @@ def partial_fourier_findings(found: dict[str, Coverage]) -> list[Finding]:
             "partial-fourier",
             "info",
             f"The {each.missing} side of {axis} was measured only out to {_short(each) / _long(each):.0%} of the other "
-            f"(partial Fourier, {each.fraction:.0%} of the axis): detail beyond that is blurred along {axis[1:]}.",
+            f"(partial Fourier, {each.fraction:.0%} of the axis): detail beyond that is blurred along {axis[1:]}; "
+            f'where the phase is smooth, set constraint to "real" to fill it in.',
             f"/mask {axis}",
             {"fraction": each.fraction},
         )

@@ -169,7 +169,7 @@ def readout_finding(facts: SamplingFacts, plane_axes: tuple[str, str]) -> list[F
                 "partial-echo",
                 "info",
                 "The mask leaves out part of every readout (partial echo): resolution along x is lower than the "
-                "matrix says.",
+                'matrix says; where the phase is smooth, set constraint to "real" to fill in detail.',
                 "/mask",
             )
         ]

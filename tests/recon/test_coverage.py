@@ -13,8 +13,8 @@ from recon.coverage import coverage
 from recon.inspection import inspect
 from recon.pipeline import reconstruct
 from recon.scan import PlaneIndex
-from recon.settings import Settings
-from tests.recon.scans import example
+from recon.settings import Settings, parse_settings
+from tests.recon.scans import error, example
 
 
 def lines(size: int, every: int, first: int, last: int, centre: int = 12) -> Any:
@@ -103,6 +103,20 @@ def test_report_says_what_was_left_out() -> None:
     by_code = {finding["code"]: finding for finding in report["findings"]}
     assert "partial-echo" in by_code
     assert "positive side of ky" in by_code["partial-fourier"]["message"]
+    assert all(
+        'set constraint to "real"' in by_code[code]["message"] for code in ("partial-echo", "partial-fourier")
+    )
+
+
+def test_the_constraint_that_is_offered_fills_in_detail() -> None:
+    """Source: Noll, Nishimura & Macovski 1991: smooth phase: a little over half of k-space is enough."""
+    found = example((96, 88), every=1)
+    scan = replace(found.scan, mask_array=LabelledArray(np.arange(96) < 60, ("ky",)))
+    errors = []
+    for constraint in ("none", "real"):
+        settings = {"constraint": constraint, "wavelet_strength": 0.1, "tv_strength": 0.1}
+        errors.append(error(reconstruct(scan, parse_settings(settings)).image, found))
+    assert errors[1] < 0.9 * errors[0]
 
 
 def test_whole_scan_has_no_such_finding() -> None:
