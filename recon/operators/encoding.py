@@ -95,8 +95,12 @@ class Encoding(LinearOperator):
 
     def to_range(self, kspace: NDArray[Any]) -> NDArray[Any]:
         """Weighted k-space, coil first and zero where not sampled, in the space that `forward` maps to."""
-        data = kspace if -1 in self.axes else inverse_transform(kspace, (-1,))
-        return np.where(self.weight != 0, data * self.weight, 0)
+        out = np.empty(kspace.shape, kspace.dtype)
+        for samples, target in zip(kspace, out, strict=True):  # coil by coil, for the sake of memory
+            data = samples if -1 in self.axes else inverse_transform(samples, (-1,))
+            np.multiply(data, self.weight, out=target)
+            np.copyto(target, 0, where=self.weight == 0)
+        return out
 
     def to_kspace(self, data: NDArray[Any]) -> NDArray[Any]:
         """The inverse of `to_range`: k-space, coil first."""
@@ -107,7 +111,10 @@ class Encoding(LinearOperator):
     def forward(self, x: NDArray[Any]) -> NDArray[Any]:
         """Image to sampled data, zero where not sampled."""
         x = x if self.phase is None else self.phase * x
-        return np.asarray(transform(self.maps * x, self.axes) * self.weight)
+        out = np.empty(self.range_shape, np.result_type(self.maps, x))
+        for map_, target in zip(self.maps, out, strict=True):
+            np.multiply(transform(map_ * x, self.axes), self.weight, out=target)
+        return out
 
     def adjoint(self, y: NDArray[Any]) -> NDArray[Any]:
         """Sampled data to image."""
