@@ -21,6 +21,7 @@ from dataclasses import dataclass
 from typing import Any, Final
 
 import numpy as np
+import scipy.linalg
 from numpy.typing import NDArray
 
 from recon.coils.grids import interpolate, interpolate_directions
@@ -32,6 +33,10 @@ KERNEL: Final = 6
 RELATIVE_SINGULAR_VALUE: Final = 0.02
 #: and nowhere those below this fraction: in a scan almost free of noise they hold what the patch cannot.
 SMALLEST_SINGULAR_VALUE: Final = 0.002
+#: rounding of eigenvalues in single precision stays below a hundredth of a limit above this fraction of the largest.
+SINGLE_PRECISION: Final = 1e-5
+#: steps of the power iteration for the largest eigenvalue.
+POWER_STEPS: Final = 30
 #: maps are computed on a grid this many times finer than W's own bandwidth, then interpolated.
 GRID_FACTOR: Final = 2
 #: pixels of the low-resolution object, above this fraction of its largest magnitude, set the support ...
@@ -144,15 +149,34 @@ def _signal_subspace(
     patches = 0
     for block in blocks:
         windows = np.lib.stride_tricks.sliding_window_view(block, kernel, axis=(1, 2))
-        columns = windows.transpose(0, 3, 4, 1, 2).reshape(size, -1)
+        columns = windows.transpose(0, 3, 4, 1, 2).reshape(size, -1).astype(np.complex128)
         gram += columns @ columns.conj().T
         patches += columns.shape[1]
-    values, vectors = np.linalg.eigh(gram)
+    largest = _largest_eigenvalue(gram)
+    if largest == 0:
+        return np.eye(size, 1, dtype=np.complex128)
     fraction = SMALLEST_SINGULAR_VALUE if has_noise_units else RELATIVE_SINGULAR_VALUE
     noise = np.sqrt(patches) + np.sqrt(size) if has_noise_units else 0.0
-    limit = max(fraction**2 * values[-1], noise**2)
-    keep = values > min(limit, 0.999 * values[-1])
-    return np.asarray(vectors[:, keep])
+    limit = min(max(fraction**2 * largest, noise**2), 0.99 * largest) / largest
+    # single precision halves the time, and is enough where its rounding is far below what is kept
+    kind = np.complex64 if limit > SINGLE_PRECISION else np.complex128
+    _, vectors = scipy.linalg.eigh(
+        (gram / largest).astype(kind), driver="evr", subset_by_value=(limit, np.inf), check_finite=False
+    )
+    return np.asarray(vectors, np.complex128)
+
+
+def _largest_eigenvalue(gram: NDArray[Any]) -> float:
+    """By power iteration, to some thousandths: a limit is all that depends on it."""
+    vector = gram[:, int(np.argmax(np.diag(gram).real))]
+    value = 0.0
+    for _ in range(POWER_STEPS):
+        size = float(np.linalg.norm(vector))
+        if size == 0:
+            return 0.0
+        vector = gram @ (vector / size)
+        value = float(np.linalg.norm(vector))
+    return value
 
 
 def _threshold(eigenvalue: NDArray[Any], blocks: list[NDArray[Any]], has_noise_units: bool) -> float:
