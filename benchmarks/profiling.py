@@ -5,14 +5,16 @@ from __future__ import annotations
 import cProfile
 import io
 import pstats
+import time
 from collections.abc import Callable, Iterator
-from contextlib import contextmanager
+from contextlib import ExitStack, contextmanager
 from types import ModuleType
 from typing import Any
 
 from benchmarks.figures import Figure, Run
 from benchmarks.machine import cpu_seconds, yardstick
 from recon import kernels
+from recon.operators import filters
 
 LINES = 25
 
@@ -26,8 +28,10 @@ def profile(figure: Figure, run: Run) -> str:
     work()  # compiled, and read from its cache, before the clock starts
     unit = yardstick()
     seconds = cpu_seconds(work, 1)
-    recorder = cProfile.Profile()
-    with visible(kernels):
+    recorder = cProfile.Profile(time.process_time)  # other processes do not count
+    with ExitStack() as stack:
+        for module in (kernels, filters):
+            stack.enter_context(visible(module))
         recorder.runcall(work)
     out = io.StringIO()
     pstats.Stats(recorder, stream=out).strip_dirs().sort_stats("tottime").print_stats(LINES)
