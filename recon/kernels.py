@@ -230,6 +230,13 @@ def scale(x: Real, factor: Real) -> None:
 
 
 @compiled
+def subtract(x: Real, factor: Any, y: Real) -> None:
+    """x -= factor y, in place."""
+    for i in range(x.size):
+        x[i] -= factor * y[i]
+
+
+@compiled
 def ascend_coefficients(q: Real, c: Real, step: Any, radius: Any, corner: tuple[int, int, int]) -> None:
     """q = projection of q + step c onto |q| <= radius, in place; zero in the approximation corner."""
     slabs, rows, width = q.shape

@@ -23,6 +23,9 @@ PROGRAM_BYTES: Final = 200_000_000
 _NUMBER: Final = 8
 #: images of a joint solve (state of the iteration, dual fields, transforms on their way), in images of the volume.
 JOINT_IMAGES: Final = 18
+#: the phase that is taken out of a constrained image, and the dual fields' sum and transforms, likewise.
+PHASE_IMAGES: Final = 2
+SHIFT_IMAGES: Final = 3
 #: arrays of all coils of one plane, or of the frames of a series, while it is solved.
 PLANE_ARRAYS: Final = 8
 
@@ -61,9 +64,13 @@ def estimate_bytes(scan: Scan, settings: Settings, *, threads: int = 1) -> int:
     held = POSITIONS if grid.kept[2] == grid.written[2] else grid.kept[2] + 3 * grid.written[2]
     total += 2 * volumes * written * held
     if settings.volume == "joint":
+        images = JOINT_IMAGES + (PHASE_IMAGES if settings.constraint != "none" else 0)
+        # one of the wavelet terms has no dual field, unless the image is non-negative
+        fields = settings.wavelet_shifts - (settings.constraint != "nonnegative")
+        images += fields + SHIFT_IMAGES if fields > 0 else 0
         virtual = getattr(settings.coil_compression, "coils", coils)
         # maps and data; of incomplete readouts the residual of all coils takes the place of the data
-        total += (2 * virtual + JOINT_IMAGES + (0 if is_complete else coils)) * plane * positions * _NUMBER
+        total += (2 * virtual + images + (0 if is_complete else coils)) * plane * positions * _NUMBER
     else:
         total += (threads + 1) * PLANE_ARRAYS * coils * plane * _NUMBER
     return total

@@ -87,14 +87,18 @@ class ShiftedWavelets:
         return self.radius * size, product
 
     def _forward(self, x: NDArray[Any], shift: tuple[int, ...]) -> NDArray[Any]:
-        return self.transform.forward(np.roll(x, shift, self.axes) if any(shift) else x)
+        out = np.roll(x, shift, self.axes) if any(shift) else x.copy()
+        self.transform.analyse(out)
+        return out
 
     def _collect(self) -> None:
         """sum_s T_s^H W^H q_s."""
         self.sum[...] = 0
         for field, shift in zip(self.fields, self.shifts, strict=True):
             back = tuple(-k for k in shift)
-            self.sum += np.roll(self.transform.adjoint(field), back, self.axes)
+            image = field.copy()
+            self.transform.synthesise(image)
+            self.sum += np.roll(image, back, self.axes) if any(shift) else image
 
 
 def _deep(x: NDArray[Any]) -> NDArray[Any]:

@@ -33,7 +33,6 @@ import numpy as np
 from numpy.typing import NDArray
 
 from recon import kernels
-from recon.operators import filters
 from recon.operators.base import inner, norm
 from recon.operators.encoding import Encoding
 from recon.operators.wavelet import Wavelet
@@ -319,7 +318,7 @@ class _Iteration:
         if self.q is not None:
             out[self.window] -= inverse * self.q
         if self.shifted is not None:
-            out -= inverse * self.shifted.sum
+            kernels.subtract(_flat(out), inverse, _flat(self.shifted.sum))
 
     def _prox_exact(self, x: NDArray[Any]) -> float:
         """Exact proximal map, in place, of the wavelet term with step 1/L, or of u >= 0; returns the term's value."""
@@ -328,14 +327,13 @@ class _Iteration:
             np.maximum(inside, 0, out=inside)
         if self.wavelet_strength == 0:
             return 0.0
-        real, (low, high) = _deep(x), self.transform.filters(self.b.dtype)
+        real = _deep(x)
         slabs, rows, columns = (1, *self.transform.approximation_shape)[-3:]
         if self.encoding.depth == "series":
             slabs = len(real)  # each frame has its own approximation
-        levels = self.transform.levels, self.transform.slab_levels
-        filters.analyse(real, low, high, *levels)
+        self.transform.analyse(x)
         size = kernels.shrink(real, self.real(self.wavelet_strength / self.lipschitz), (slabs, rows, columns))
-        filters.synthesise(real, low, high, *levels)
+        self.transform.synthesise(x)
         return self.wavelet_strength * size
 
     def _normal(self, x: NDArray[Any]) -> NDArray[Any]:

@@ -60,14 +60,22 @@ class Wavelet(LinearOperator):
     def forward(self, x: NDArray[Any]) -> NDArray[Any]:
         """Coefficients of a padded image, approximation in the leading corner."""
         out = np.array(x, order="C")
-        filters.analyse(_deep(out), *self.filters(out.dtype), self.levels, self.slab_levels)
+        self.analyse(out)
         return out
 
     def adjoint(self, y: NDArray[Any]) -> NDArray[Any]:
         """Padded image of coefficients: the transform is orthogonal, so the adjoint is the inverse."""
         out = np.array(y, order="C")
-        filters.synthesise(_deep(out), *self.filters(out.dtype), self.levels, self.slab_levels)
+        self.synthesise(out)
         return out
+
+    def analyse(self, x: NDArray[Any]) -> None:
+        """`forward` in place."""
+        filters.analyse(_deep(x), *self.filters(x.dtype), self.levels, self.slab_levels)
+
+    def synthesise(self, y: NDArray[Any]) -> None:
+        """`adjoint` in place."""
+        filters.synthesise(_deep(y), *self.filters(y.dtype), self.levels, self.slab_levels)
 
 
 def _deep(x: NDArray[Any]) -> NDArray[Any]:

@@ -200,3 +200,23 @@ def test_scale_is_a_product_with_real_numbers(dtype: Any, columns: int) -> None:
     expected = x * factor
     kernels.scale(reals(x), factor)
     np.testing.assert_allclose(x, expected, atol=limit(dtype))
+
+
+@pytest.mark.parametrize("dtype", DTYPES)
+def test_dual_coefficients_are_projected_outside_the_corner(dtype: Any) -> None:
+    """A step, then the nearest coefficients of at most the radius; what is not penalised has no dual."""
+    rng = np.random.default_rng(9)
+    q, c = complex_normal(rng, (2, 8, 6), dtype), complex_normal(rng, (2, 8, 6), dtype)
+    free = np.zeros(q.shape, bool)
+    free[:1, :4, :3] = True
+    moved = np.where(free, 0, q + 0.7 * c)
+    expected = moved * np.minimum(1, 0.5 / np.maximum(np.abs(moved), 1e-30))
+    real = q.real.dtype.type
+    kernels.ascend_coefficients(reals(q), reals(c), real(0.7), real(0.5), (1, 4, 3))
+    np.testing.assert_allclose(q, expected, atol=limit(dtype))
+    size, product = kernels.coefficient_sums(reals(q), reals(c), (1, 4, 3))
+    assert size == pytest.approx(np.abs(c[~free]).sum(), rel=1e-5)
+    assert product == pytest.approx(np.vdot(q, c).real, rel=1e-4, abs=1e-4)
+    expected = c - 0.3 * q
+    kernels.subtract(reals(c).ravel(), real(0.3), reals(q).ravel())
+    np.testing.assert_allclose(c, expected, atol=limit(dtype))
