@@ -73,7 +73,7 @@ def test_a_profile_names_functions_and_compiled_kernels(capsys: pytest.CaptureFi
     shown = capsys.readouterr().out
     assert " U (U = " in shown
     assert "(analyse)" in shown
-    assert "(ascend_dual)" in shown
+    assert "(add_conjugate)" in shown
 
 
 def test_times_are_told_in_units_of_the_yardstick() -> None:
