@@ -46,6 +46,7 @@ class FullVolumes:
         for kz in range(self.shape[0]):
             samples = self.slabs.samples(volume._replace(slice=kz))
             yield kz, self.preparation.whitening.apply(samples.kspace), samples.counts
+        self.slabs.release()
 
     def measure(self, volume: PlaneIndex) -> tuple[Encoding, NDArray[Any]]:
         """E and y of one volume, in noise units and virtual coils."""

@@ -249,6 +249,8 @@ def prepare(scan: Scan, settings: Settings, report: Report) -> Preparation:
         resolved = resolved.model_copy(
             update={"coil_maps": settings.coil_maps if method == "single-coil" else method}
         )
+    if volume is not None:
+        volume.slabs.release()
     return Preparation(
         scan=scan,
         settings=resolved,

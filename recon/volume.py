@@ -52,6 +52,10 @@ class _Blocks:
         """Shape of the whole."""
         return self._data.shape
 
+    def release(self) -> None:
+        """Forget the last block."""
+        self._kept = None
+
     def __getitem__(self, key: tuple[Any, ...]) -> Any:
         start = key[self._axis] // self._step * self._step
         where = (start, *(part if isinstance(part, int) else None for part in key[: self._axis]))
@@ -90,6 +94,11 @@ class Slabs(Scan):
         lines = np.any(data != 0, axis=(0, 2))
         sampled = np.repeat(lines[:, np.newaxis], data.shape[2], axis=1)
         return sampled if self.columns is None else sampled & self.columns
+
+    def release(self) -> None:
+        """Free what was kept of the file for reading on."""
+        if isinstance(self.kspace_array.data, _Blocks):
+            self.kspace_array.data.release()
 
     def planes(self) -> list[PlaneIndex]:
         """Every slab, volume by volume, in the order that a file is read fastest."""

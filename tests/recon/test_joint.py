@@ -175,3 +175,17 @@ def test_inverse_transforms_of_the_tests_agree_with_each_other() -> None:
     found = volume(SMALL, noise=0.0, mask=np.ones(SMALL[:2], bool))
     coils = inverse3(found.kspace)
     np.testing.assert_allclose(np.sum(maps3(4, SMALL).conj() * coils, axis=0), found.truth, atol=1e-5)
+
+
+@pytest.mark.parametrize("constraint", ["real", "nonnegative"])
+@pytest.mark.parametrize("is_complete", [True, False])
+def test_constraints_and_cycle_spinning_in_both_spaces(constraint: str, is_complete: bool) -> None:
+    mask = plane_mask(SMALL[:2], 2)
+    full = mask if is_complete else np.repeat(mask[..., np.newaxis], 20, axis=2)
+    if not is_complete:
+        full[0, :, 0] = False
+    found = volume(SMALL, mask=full)
+    update = {"constraint": constraint, "wavelet_shifts": 2, "tolerance": 1e-3}
+    image = reconstruct(with_maps(found.scan, SMALL), JOINT.model_copy(update=update)).image
+    inside = np.abs(found.truth) > 0
+    assert nrmse(image[inside], found.truth[inside]) < 0.12
