@@ -28,6 +28,8 @@ PHASE_IMAGES: Final = 2
 SHIFT_IMAGES: Final = 3
 #: arrays of all coils of one plane, or of the frames of a series, while it is solved.
 PLANE_ARRAYS: Final = 8
+#: and more of them for a second set of maps.
+SECOND_SET_ARRAYS: Final = 3
 
 
 def estimate_bytes(scan: Scan, settings: Settings, *, threads: int = 1) -> int:
@@ -42,13 +44,14 @@ def estimate_bytes(scan: Scan, settings: Settings, *, threads: int = 1) -> int:
         Planes worked on at once.
     """
     coils = scan.coils
+    plane_arrays = PLANE_ARRAYS + SECOND_SET_ARRAYS * (settings.map_sets - 1)
     if not scan.is_volume:
         tied = settings.method == "compressed-sensing" and (
             settings.temporal_strength != 0 or settings.low_rank_strength != 0
         )
         frames = scan.axes.get("frame", 1) if tied else 1
         plane = coils * frames * int(np.prod(scan.plane_shape)) * _NUMBER
-        return PROGRAM_BYTES + (threads + 1) * PLANE_ARRAYS * plane
+        return PROGRAM_BYTES + (threads + 1) * plane_arrays * plane
     grid = image_grid(scan)
     lines, is_complete = _sampled_lines(scan)
     positions = grid.kept[2] if is_complete else grid.encoded[2]
@@ -72,7 +75,7 @@ def estimate_bytes(scan: Scan, settings: Settings, *, threads: int = 1) -> int:
         # maps and data; of incomplete readouts the residual of all coils takes the place of the data
         total += (2 * virtual + images + (0 if is_complete else coils)) * plane * positions * _NUMBER
     else:
-        total += (threads + 1) * PLANE_ARRAYS * coils * plane * _NUMBER
+        total += (threads + 1) * plane_arrays * coils * plane * _NUMBER
     return total
 
 
