@@ -31,6 +31,7 @@ from benchmarks.scanner import (
     positions,
     smooth_phase,
 )
+from benchmarks.search import side_by_side
 from recon.axes import LabelledArray
 from recon.pipeline import reconstruct
 from recon.scan import Scan
@@ -205,7 +206,7 @@ def _reduced(motion: Motion) -> Motion:
 def measure_motion(run: Run) -> list[Result]:
     """Mean over the motions of the error together over the error frame by frame."""
     motions = [_reduced(motion) for motion in MOTIONS[:1]] if run.reduced else list(MOTIONS)
-    rows = [compare(motion) for motion in motions]
+    rows = side_by_side(compare, motions, run.processes)
     ratios = [row["ratio"] for row in rows]
     return [Result("moving", float(np.mean(ratios)), {"worst": max(ratios), "motions": rows})]
 
