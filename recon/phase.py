@@ -14,6 +14,7 @@ from typing import Any, Final
 import numpy as np
 from numpy.typing import NDArray
 
+from recon.coils.calibration import central_block
 from recon.errors import InvalidScan
 from recon.operators.encoding import Encoding
 from recon.operators.fourier import inverse_transform, transform
@@ -87,7 +88,10 @@ def _window(sampled: NDArray[np.bool_], axes: tuple[int, ...], shape: tuple[int,
 
 
 def _block(sampled: NDArray[np.bool_], axes: tuple[int, ...], shape: tuple[int, ...]) -> dict[int, int]:
-    """Sides of a fully sampled centred block, by axis: grown in turn from DC until no side can grow."""
+    """Sides of a fully sampled centred block, by axis; of a volume grown in turn from DC until no side can grow."""
+    if len(shape) == 2:  # the calibration block, so that samples kept out elsewhere leave the phase as it is
+        of_plane = dict(zip((-2, -1), central_block(np.broadcast_to(sampled, shape)), strict=True))
+        return {axis: of_plane[axis] for axis in axes}
     full = np.broadcast_to(sampled, shape) if sampled.shape[-1] > 1 else sampled
     sides = dict.fromkeys(axes, 0)
 
