@@ -58,6 +58,7 @@ def tikhonov(
     *,
     tolerance: float,
     max_iterations: int,
+    start: Solution | None = None,
     callback: Callable[[int, float], None] | None = None,
     is_real: bool = False,
 ) -> Solution:
@@ -72,7 +73,7 @@ def tikhonov(
         In the encoding's range.
     strength : float
         Weight in noise units.
-    tolerance, max_iterations, callback
+    tolerance, max_iterations, start, callback
         As for `recon.solver.solve`.
     is_real : bool
         Whether u is real: then all gradients are of their real parts.
@@ -84,11 +85,16 @@ def tikhonov(
     b = encoding.adjoint(data)
     if is_real:
         b.imag = 0
+    scale, energy = norm(b), norm(data) ** 2
     x, r = np.zeros_like(b), b.copy()
+    if start is not None and scale > 0:
+        x = start.image.copy()
+        r -= encoding.normal(x) + b.real.dtype.type(strength) * x
+        if is_real:
+            r.imag = 0
     p, rho = r.copy(), norm(r) ** 2
-    scale, energy = np.sqrt(rho), norm(data) ** 2
     objective: list[float] = []
-    optimality = 0.0 if scale == 0 else 1.0
+    optimality = 0.0 if scale == 0 else float(np.sqrt(rho) / scale)
     iteration = 0
     while optimality >= tolerance and iteration < max_iterations:
         q = encoding.normal(p) + b.real.dtype.type(strength) * p

@@ -9,18 +9,16 @@ read, solved and judged; results are written in order.
 
 from __future__ import annotations
 
-import threading
-from collections import OrderedDict
-from collections.abc import Callable, Mapping
+from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Any, Final
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 from threadpoolctl import threadpool_limits
 
-from recon.coils.maps import CoilMaps, MapFigures
+from recon.coils.shelf import MapShelf
 from recon.consistency import ResidualFigures
 from recon.errors import InvalidScan
 from recon.formats import ImageWriter, open_scan
@@ -30,20 +28,12 @@ from recon.memory import check_memory
 from recon.parallel import in_order
 from recon.plane import PlaneResult, reconstruct_together
 from recon.preparation import Plane, Preparation, Sink, prepare
+from recon.progress import PLANES_DONE, Progress, Teller
 from recon.report import SolverFigures, build_report
 from recon.scan import PlaneIndex, Scan
 from recon.settings import Settings
+from recon.tuning import tune
 from recon.volume_sink import PositionSink
-
-#: called as progress(stage, fraction of the whole job); raise from it to cancel between two iterations.
-Progress = Callable[[str, float], None]
-
-STAGES: Final = (
-    "read", "inspect", "whiten", "crop", "compress", "coil-maps", "solve", "combine", "consistency", "write",
-)  # fmt: skip
-#: share of the whole job that is over when the first plane's maps begin, and when the last plane is written.
-_PREPARED: Final = 0.05
-_PLANES_DONE: Final = 0.98
 
 
 @dataclass(frozen=True)
@@ -103,11 +93,12 @@ def reconstruct(
         Naming what was received, what is accepted and what to do.
     """
     memory = _Memory(scan)
-    tell = _Teller(progress)
-    check_memory(scan, settings or Settings(), memory_limit_bytes, threads=threads)
+    tell = Teller(progress)
+    settings = settings or Settings()
+    check_memory(scan, settings, memory_limit_bytes, threads=threads)
     with _one_thread_for_each_plane():
-        preparation = prepare(scan, settings or Settings(), tell.preparing)
-        report = _run(preparation, _sink(preparation, memory), tell, provenance or {}, threads)
+        preparation = prepare(scan, settings, tell.preparing)
+        report = _run(preparation, settings, _sink(preparation, memory), tell, provenance or {}, threads)
     tell("write", 1.0)
     arrays = memory.arrays
     return Reconstruction(arrays["image"], arrays["residual_image"], scan.image_axes, report)
@@ -138,13 +129,15 @@ def reconstruct_file(
     """
     if Path(image_path).exists() and Path(image_path).samefile(scan_path):
         raise InvalidScan(f"the image would overwrite the scan {Path(scan_path).name}; give it another path")
-    tell = _Teller(progress)
+    tell = Teller(progress)
     with _one_thread_for_each_plane(), open_scan(scan_path) as scan:
-        check_memory(scan, settings or Settings(), memory_limit_bytes, threads=threads)
-        preparation = prepare(scan, settings or Settings(), tell.preparing)
+        settings = settings or Settings()
+        check_memory(scan, settings, memory_limit_bytes, threads=threads)
+        preparation = prepare(scan, settings, tell.preparing)
         with ImageWriter(image_path, scan, preparation.image_grid) as writer:
-            report = _run(preparation, _sink(preparation, writer), tell, provenance or {}, threads)
-            tell("write", _PLANES_DONE)
+            sink = _sink(preparation, writer)
+            report = _run(preparation, settings, sink, tell, provenance or {}, threads)
+            tell("write", PLANES_DONE)
             writer.finish(report, provenance or {})
     tell("write", 1.0)
     return report
@@ -184,7 +177,12 @@ def _sink(preparation: Preparation, target: _Memory | ImageWriter) -> Sink:
 
 
 def _run(
-    preparation: Preparation, sink: Sink, tell: _Teller, provenance: Mapping[str, Any], threads: int
+    preparation: Preparation,
+    settings: Settings,
+    sink: Sink,
+    tell: Teller,
+    provenance: Mapping[str, Any],
+    threads: int,
 ) -> dict[str, Any]:
     if preparation.is_joint:
         return run_joint(preparation, sink, tell, provenance)
@@ -196,7 +194,9 @@ def _run(
     )
     solver = SolverFigures()
     groups = preparation.groups()
-    shelf = _MapShelf(preparation, tell, threads + 1)
+    shelf = MapShelf(preparation, tell, threads + 1)
+    preparation, choice = tune(preparation, settings, groups, shelf, tell, threads)
+    solver.choice = choice
     tell.begin(len(groups))
 
     def work(group: list[PlaneIndex]) -> _Work:
@@ -204,7 +204,11 @@ def _run(
         planes = [preparation.load(index) for index in group]
         tell("solve")
         results = reconstruct_together(
-            preparation, maps, planes, tell.iteration(group[0], preparation.settings)
+            preparation,
+            maps,
+            planes,
+            tell.iteration(group[0], preparation.settings),
+            start=None if choice is None else choice.starts.get(group[0]),
         )
         tell("combine")
         return _Work(group, planes, results)
@@ -233,90 +237,3 @@ class _Work:
     group: list[PlaneIndex]
     planes: list[Plane]
     results: list[PlaneResult]
-
-
-class _MapShelf:
-    """Maps of the slices now worked on, made once by whichever thread needs them first."""
-
-    def __init__(self, preparation: Preparation, tell: _Teller, size: int) -> None:
-        self.preparation, self.tell, self.size = preparation, tell, size
-        self.figures: dict[int, MapFigures] = {}
-        self._kept: OrderedDict[int, CoilMaps] = OrderedDict()
-        self._locks: dict[int, threading.Lock] = {}
-        self._lock = threading.Lock()
-
-    def maps_of(self, position: int) -> CoilMaps | None:
-        """Maps of one slice; None for the coil-by-coil method, which needs none."""
-        if self.preparation.map_method is None:
-            return None
-        with self._lock:
-            lock = self._locks.setdefault(position, threading.Lock())
-        with lock:
-            maps = self._kept.get(position)
-            if maps is None:
-                self.tell("coil-maps")
-                maps = self.preparation.make_maps(position)
-        with self._lock:
-            self.figures[position] = maps.figures
-            self._kept[position] = maps
-            while len(self._kept) > self.size:
-                self._kept.popitem(last=False)
-        return maps
-
-
-class _Teller:
-    """Turns what happens in each stage, in whichever thread, into one fraction that only grows."""
-
-    def __init__(self, progress: Progress | None) -> None:
-        self.progress = progress
-        self.fraction = 0.0
-        self._lock = threading.RLock()
-        self._done, self._groups = 0, 1
-        self._within: dict[PlaneIndex, float] = {}
-        self._error: BaseException | None = None
-
-    def __call__(self, stage: str, fraction: float | None = None) -> None:
-        with self._lock:
-            if self._error is not None:  # raised in another thread: the whole job is cancelled
-                raise self._error
-            if fraction is not None:
-                self.fraction = max(self.fraction, min(fraction, 1.0))
-            if self.progress is not None:
-                try:
-                    self.progress(stage, self.fraction)
-                except BaseException as error:
-                    self._error = error
-                    raise
-
-    def preparing(self, stage: str, fraction: float) -> None:
-        """Progress within the pass over all data, the first part of the job."""
-        self(stage, _PREPARED * fraction)
-
-    def begin(self, groups: int) -> None:
-        """The groups of planes begin."""
-        self._groups = groups
-        self("coil-maps", _PREPARED)
-
-    def finished(self, group: PlaneIndex) -> None:
-        """One more group, named by its first plane, is written."""
-        with self._lock:
-            self._done += 1
-            self._within.pop(group, None)
-            self._advance("write")
-
-    def iteration(self, group: PlaneIndex, settings: Settings) -> Callable[[int, float], None]:
-        """Callback of the solver; the residual falls geometrically, so its logarithm tells how far the solve is."""
-        goal = np.log(settings.tolerance)
-
-        def tell(iteration: int, optimality: float) -> None:
-            by_residual = np.log(min(max(optimality, settings.tolerance), 1.0)) / goal
-            by_count = iteration / settings.max_iterations
-            with self._lock:
-                self._within[group] = 0.95 * float(max(by_residual, by_count))
-                self._advance("solve")
-
-        return tell
-
-    def _advance(self, stage: str) -> None:
-        over = self._done + sum(self._within.values())
-        self(stage, _PREPARED + (_PLANES_DONE - _PREPARED) * over / self._groups)

@@ -48,6 +48,8 @@ def reconstruct_together(
     maps: CoilMaps | None,
     planes: list[Plane],
     callback: Callback | None = None,
+    *,
+    start: Solution | None = None,
 ) -> list[PlaneResult]:
     """Solve one plane, or the frames of a series as one problem, by the settings' method and combine.
 
@@ -60,6 +62,8 @@ def reconstruct_together(
         Whitened samples of all coils.
     callback : callable, optional
         Called as callback(iteration, optimality).
+    start : Solution, optional
+        Of a neighbouring problem.
 
     Returns
     -------
@@ -68,7 +72,7 @@ def reconstruct_together(
     """
     if maps is None:
         return [_coil_by_coil(preparation, plane) for plane in planes]
-    u, solution = _solve(preparation, maps, planes, callback)
+    u, solution = _solve(preparation, maps, planes, callback, start)
     frames = [u] if len(planes) == 1 else u
     return [
         finish_plane(preparation, maps, frame, plane, solution)
@@ -81,6 +85,7 @@ def _solve(
     maps: CoilMaps,
     planes: list[Plane],
     callback: Callback | None,
+    start: Solution | None,
 ) -> tuple[NDArray[Any], Solution | None]:
     """u of the planes, (frame, rows, columns); a single plane has no frame axis."""
     settings = preparation.settings
@@ -99,13 +104,16 @@ def _solve(
             strength,
             tolerance=tolerance,
             max_iterations=max_iterations,
+            start=start,
             callback=callback,
             is_real=settings.constraint == "real",
         )
     else:
         problem = make_problem(preparation, maps, planes)
         encoding = problem.encoding
-        solution = solve(problem, tolerance=tolerance, max_iterations=max_iterations, callback=callback)
+        solution = solve(
+            problem, tolerance=tolerance, max_iterations=max_iterations, start=start, callback=callback
+        )
     return encoding.with_phase(solution.image), solution
 
 

@@ -228,7 +228,9 @@ def prepare(scan: Scan, settings: Settings, report: Report) -> Preparation:
     report("whiten", 0.0)
     silent = excluded.renumbered(inspection.channels["silent_in_noise"])
     whitening = estimate_whitening(scan, mean_count, scan if volume is None else volume.slabs, silent)
-    resolved = resolve_strengths(settings, has_noise_units=whitening.has_noise_units)
+    resolved = resolve_strengths(
+        settings, has_noise_units=whitening.has_noise_units, frames=scan.axes.get("frame", 1)
+    )
     report("crop", 0.0)
     report("compress", 0.0)
     blocks = {position: each.blocks for position, each in calibration.items()}

@@ -15,6 +15,7 @@ from recon.overfitting import least_squares_findings
 from recon.preparation import Preparation
 from recon.scan import PlaneIndex
 from recon.solver import Solution
+from recon.tuning import Choice
 
 SCHEMA_VERSION: Final = 1
 #: values of the objective kept for each plane: enough to draw the curve.
@@ -29,6 +30,7 @@ class SolverFigures:
 
     def __init__(self) -> None:
         self.planes: list[dict[str, Any]] = []
+        self.choice: Choice | None = None
 
     def see(self, group: list[PlaneIndex], solution: Solution | None) -> None:
         """Take in the solution of one plane, or of planes solved together."""
@@ -53,6 +55,7 @@ class SolverFigures:
         settings = preparation.settings
         return {
             "method": settings.method,
+            "strengths": None if self.choice is None else self.choice.as_dict(),
             "planes": self.planes if preparation.volume is None else self._of_volume(preparation),
             "converged_planes": sum(plane["stop_reason"] != "iteration-limit" for plane in self.planes),
             "iterations": sum(plane["iterations"] for plane in self.planes),

@@ -105,7 +105,7 @@ class Settings(BaseModel):
     ----------
     method : {"compressed-sensing", "tikhonov", "zero-filled"}
     wavelet_strength, tv_strength : "auto" or float
-        Weights lambda_w and lambda_t of the objective, in noise units. `auto` is a fixed value (`recon.strengths`).
+        Weights lambda_w and lambda_t of the objective, in noise units. `auto`: chosen by `recon.tuning`.
     temporal_strength : "auto" or float
         Weight of the total variation along `frame`, which joins the frames of a slice into one problem;
         0: each frame alone.
@@ -148,7 +148,7 @@ class Settings(BaseModel):
     method: Literal["compressed-sensing", "tikhonov", "zero-filled"] = "compressed-sensing"
     wavelet_strength: Strength = "auto"
     tv_strength: Strength = "auto"
-    temporal_strength: Strength = 0.0
+    temporal_strength: Strength = "auto"
     low_rank_strength: Annotated[float, BeforeValidator(_number_strength)] = 0.0
     tikhonov_strength: Strength = "auto"
     wavelet: Annotated[str, BeforeValidator(_wavelet), Field(json_schema_extra={"enum": list(WAVELETS)})] = (

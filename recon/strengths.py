@@ -1,6 +1,7 @@
-"""What `auto` means for each strength: fixed values in noise units, found on simulated scans of two real heads.
+"""What is known of each strength before a scan is seen: values in noise units, best on simulated scans of two heads.
 
-The figures and the grid they were chosen from come out of `benchmarks/quality.py`.
+`auto` begins at these and moves with what held-out samples of the scan say (`recon.tuning`); where a scan has none to
+spare, it ends there. The figures and the grid they were chosen from come out of `benchmarks/quality.py`.
 """
 
 from __future__ import annotations
@@ -10,12 +11,14 @@ from typing import Final
 from recon.settings import Settings
 
 #: lambda_w and lambda_t where the noise is known.
-WAVELET_AUTO: Final = 0.08
-TV_AUTO: Final = 0.09
+WAVELET_KNOWN: Final = 0.07
+TV_KNOWN: Final = 0.07
 #: lambda_f, between the frames of a series, where the noise is known.
-TEMPORAL_AUTO: Final = 0.2
+TEMPORAL_KNOWN: Final = 0.4
+#: in a series that is tied together, frames stand in for each other, and each needs half of its own penalties.
+SERIES_FACTOR: Final = 0.5
 #: weight of 1/2 ||u||^2 where the noise is known.
-TIKHONOV_AUTO: Final = 0.03
+TIKHONOV_KNOWN: Final = 0.03
 #: fractions of max |u| of the zero-filled image where the scan is free of noise.
 WAVELET_NOISE_FREE: Final = 3e-4
 TV_NOISE_FREE: Final = 3e-4
@@ -23,24 +26,26 @@ TEMPORAL_NOISE_FREE: Final = 3e-4
 TIKHONOV_NOISE_FREE: Final = 1e-4
 
 
-def resolve_strengths(settings: Settings, *, has_noise_units: bool) -> Settings:
-    """Replace every `"auto"` strength by its value.
+def resolve_strengths(settings: Settings, *, has_noise_units: bool, frames: int = 1) -> Settings:
+    """Replace every `"auto"` strength by what is known of it beforehand.
 
     Parameters
     ----------
     settings : Settings
     has_noise_units : bool
         Whether the noise is known; without it strengths are fractions of the largest zero-filled image value.
+    frames : int
+        Of the scan; more than one that something ties together are a series.
 
     Returns
     -------
     Settings
     """
     known = {
-        "wavelet_strength": WAVELET_AUTO,
-        "tv_strength": TV_AUTO,
-        "temporal_strength": TEMPORAL_AUTO,
-        "tikhonov_strength": TIKHONOV_AUTO,
+        "wavelet_strength": WAVELET_KNOWN,
+        "tv_strength": TV_KNOWN,
+        "temporal_strength": TEMPORAL_KNOWN,
+        "tikhonov_strength": TIKHONOV_KNOWN,
     }
     noise_free = {
         "wavelet_strength": WAVELET_NOISE_FREE,
@@ -49,5 +54,7 @@ def resolve_strengths(settings: Settings, *, has_noise_units: bool) -> Settings:
         "tikhonov_strength": TIKHONOV_NOISE_FREE,
     }
     values = known if has_noise_units else noise_free
+    if frames > 1 and (settings.temporal_strength != 0 or settings.low_rank_strength > 0):
+        values = {**values, **{name: SERIES_FACTOR * values[name] for name in ("wavelet_strength", "tv_strength")}}
     chosen = {name: value for name, value in values.items() if getattr(settings, name) == "auto"}
     return settings.model_copy(update=chosen)

@@ -16,7 +16,8 @@ from recon.axes import LabelledArray
 from recon.caution import CAUTION
 from recon.errors import CalibrationMissing, Cancelled, InvalidScan, InvalidSettings
 from recon.formats import open_scan, read_image, write_scan
-from recon.pipeline import STAGES, reconstruct, reconstruct_file
+from recon.pipeline import reconstruct, reconstruct_file
+from recon.progress import STAGES
 from recon.scan import PlaneIndex, Scan
 from recon.settings import Settings, parse_settings
 from tests.recon.scans import Example, error, example
