@@ -93,7 +93,7 @@ def _check_volume(facts: Mapping[str, Any], settings: Settings) -> None:
             )
         return
     for name in ("temporal_strength", "low_rank_strength"):
-        if axes.get("frame", 1) > 1 and getattr(settings, name) != 0:
+        if axes.get("frame", 1) > 1 and getattr(settings, name) not in (0, "auto"):
             _refuse(
                 f"/{name}",
                 f"received {getattr(settings, name)} for a volume with frames; accepted is 0: each frame is a volume "
@@ -167,7 +167,7 @@ def _check_map_sets(facts: Mapping[str, Any], settings: Settings) -> None:
             "sensitivity for two sets",
         )
     for name in ("temporal_strength", "low_rank_strength"):
-        if axes.get("frame", 1) > 1 and getattr(settings, name) != 0:
+        if axes.get("frame", 1) > 1 and getattr(settings, name) not in (0, "auto"):
             _refuse(
                 "/map_sets",
                 f"received 2 with {name} {getattr(settings, name)}; accepted is 2 where frames are solved one by one: "

@@ -13,6 +13,7 @@ from recon.preparation import Preparation, Sink
 from recon.report import SolverFigures, build_report
 from recon.scan import PlaneIndex
 from recon.settings import Settings
+from recon.tuning import Choice
 
 
 class Teller(Protocol):
@@ -28,11 +29,15 @@ class Teller(Protocol):
 
 
 def run_joint(
-    preparation: Preparation, sink: Sink, tell: Teller, provenance: Mapping[str, Any]
+    preparation: Preparation,
+    choice: Choice | None,
+    sink: Sink,
+    tell: Teller,
+    provenance: Mapping[str, Any],
 ) -> dict[str, Any]:
     """Solve every volume of a scan, one for each frame and contrast; returns the report."""
     assert preparation.volume is not None
-    solver = SolverFigures()
+    solver = SolverFigures(choice)
     volumes = [index for index in preparation.scan.planes() if index.slice == 0]
     tell.begin(len(volumes))
     maps = None if preparation.map_method is None else stack_maps(preparation, tell)

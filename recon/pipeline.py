@@ -32,6 +32,7 @@ from recon.progress import PLANES_DONE, Progress, Teller
 from recon.report import SolverFigures, build_report
 from recon.scan import PlaneIndex, Scan
 from recon.settings import Settings
+from recon.strengths import settle_temporal
 from recon.tuning import tune
 from recon.volume_sink import PositionSink
 
@@ -94,7 +95,7 @@ def reconstruct(
     """
     memory = _Memory(scan)
     tell = Teller(progress)
-    settings = settings or Settings()
+    settings = _settled(settings, scan)
     check_memory(scan, settings, memory_limit_bytes, threads=threads)
     with _one_thread_for_each_plane():
         preparation = prepare(scan, settings, tell.preparing)
@@ -131,7 +132,7 @@ def reconstruct_file(
         raise InvalidScan(f"the image would overwrite the scan {Path(scan_path).name}; give it another path")
     tell = Teller(progress)
     with _one_thread_for_each_plane(), open_scan(scan_path) as scan:
-        settings = settings or Settings()
+        settings = _settled(settings, scan)
         check_memory(scan, settings, memory_limit_bytes, threads=threads)
         preparation = prepare(scan, settings, tell.preparing)
         with ImageWriter(image_path, scan, preparation.image_grid) as writer:
@@ -184,19 +185,22 @@ def _run(
     provenance: Mapping[str, Any],
     threads: int,
 ) -> dict[str, Any]:
+    groups = preparation.groups()
+    shelf = MapShelf(preparation, tell, threads + 1)
+    # planes of a volume can speak for it only where it falls into planes
+    is_in_planes = preparation.volume is None or preparation.volume.is_complete
+    choice = None
+    if is_in_planes:
+        preparation, choice = tune(preparation, settings, groups, shelf, tell, threads)
     if preparation.is_joint:
-        return run_joint(preparation, sink, tell, provenance)
+        return run_joint(preparation, choice, sink, tell, provenance)
     residuals = ResidualFigures(
         preparation.shape,
         preparation.whitening,
         preparation.scan.axes,
         is_volume=preparation.volume is not None,
     )
-    solver = SolverFigures()
-    groups = preparation.groups()
-    shelf = MapShelf(preparation, tell, threads + 1)
-    preparation, choice = tune(preparation, settings, groups, shelf, tell, threads)
-    solver.choice = choice
+    solver = SolverFigures(choice)
     tell.begin(len(groups))
 
     def work(group: list[PlaneIndex]) -> _Work:
@@ -223,6 +227,11 @@ def _run(
             sink.write("residual_image", index, result.residual_image)
         tell.finished(done.group[0])
     return build_report(preparation, residuals, solver, shelf.figures, provenance)
+
+
+def _settled(settings: Settings | None, scan: Scan) -> Settings:
+    frames = scan.axes.get("frame", 1)
+    return settle_temporal(settings or Settings(), frames=frames, is_volume=scan.is_volume)
 
 
 def _one_thread_for_each_plane() -> threadpool_limits:

@@ -26,11 +26,11 @@ POSITIONS_TOLD: Final = 64
 
 
 class SolverFigures:
-    """Convergence of every plane."""
+    """The choice of strengths, and the convergence of every plane."""
 
-    def __init__(self) -> None:
+    def __init__(self, choice: Choice | None = None) -> None:
+        self.choice = choice
         self.planes: list[dict[str, Any]] = []
-        self.choice: Choice | None = None
 
     def see(self, group: list[PlaneIndex], solution: Solution | None) -> None:
         """Take in the solution of one plane, or of planes solved together."""

@@ -111,7 +111,7 @@ class Search:
         while errors[step] < errors[step + 1] and step > weakest:
             step -= 1
             errors[step] = at(step)
-        return STEP ** _vertex(errors), STEP ** min(errors, key=lambda step: errors[step])
+        return STEP ** vertex(errors), STEP ** min(errors, key=lambda step: errors[step])
 
     def best_share(self, strengths: Strengths) -> float:
         """Share of the wavelet in the spatial strengths with the smallest error, in or between those tried."""
@@ -126,10 +126,10 @@ class Search:
         for other in (share - SHARE_STEP, share + SHARE_STEP):
             mixed = {"wavelet_strength": other * total, "tv_strength": (1 - other) * total}
             errors[other] = self.error({**strengths, **mixed})
-        return _vertex(errors)
+        return vertex(errors)
 
 
-def _vertex(errors: Mapping[Any, float]) -> float:
+def vertex(errors: Mapping[Any, float]) -> float:
     """Where the parabola through the smallest of at least three values and its neighbours is lowest."""
     places = sorted(errors)
     lowest = min(range(len(places)), key=lambda i: errors[places[i]])

@@ -26,6 +26,19 @@ TEMPORAL_NOISE_FREE: Final = 3e-4
 TIKHONOV_NOISE_FREE: Final = 1e-4
 
 
+def settle_temporal(settings: Settings, *, frames: int, is_volume: bool) -> Settings:
+    """Turn an automatic temporal strength off where no frames of planes can be tied together.
+
+    That is a scan of one frame, a volume, two sets of maps, or a method without penalties.
+    """
+    can_tie = (
+        frames > 1 and not is_volume and settings.map_sets == 1 and settings.method == "compressed-sensing"
+    )
+    if settings.temporal_strength != "auto" or can_tie:
+        return settings
+    return settings.model_copy(update={"temporal_strength": 0.0})
+
+
 def resolve_strengths(settings: Settings, *, has_noise_units: bool, frames: int = 1) -> Settings:
     """Replace every `"auto"` strength by what is known of it beforehand.
 
@@ -55,6 +68,9 @@ def resolve_strengths(settings: Settings, *, has_noise_units: bool, frames: int 
     }
     values = known if has_noise_units else noise_free
     if frames > 1 and (settings.temporal_strength != 0 or settings.low_rank_strength > 0):
-        values = {**values, **{name: SERIES_FACTOR * values[name] for name in ("wavelet_strength", "tv_strength")}}
+        values = {
+            **values,
+            **{name: SERIES_FACTOR * values[name] for name in ("wavelet_strength", "tv_strength")},
+        }
     chosen = {name: value for name, value in values.items() if getattr(settings, name) == "auto"}
     return settings.model_copy(update=chosen)

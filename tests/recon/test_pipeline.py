@@ -119,7 +119,8 @@ def test_report_has_the_published_keys_and_is_plain_json() -> None:
     assert report["settings"]["method"] == "compressed-sensing"
     assert isinstance(report["settings"]["wavelet_strength"], float)
     assert isinstance(report["settings"]["tv_strength"], float)
-    assert [plane["stop_reason"] for plane in report["solver"]["planes"]] == ["optimal"] * 4
+    assert [plane["stop_reason"] for plane in report["solver"]["planes"]] == ["optimal"] * 2
+    assert [plane["frames"] for plane in report["solver"]["planes"]] == [2, 2]
 
 
 def test_settings_reach_the_solver() -> None:
