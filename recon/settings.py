@@ -108,7 +108,7 @@ class Settings(BaseModel):
         Weights lambda_w and lambda_t of the objective, in noise units. `auto`: chosen by `recon.tuning`.
     temporal_strength : "auto" or float
         Weight of the total variation along `frame`, which joins the frames of a slice into one problem;
-        0: each frame alone.
+        0: each frame alone. `auto`: chosen where frames can be joined, else 0.
     low_rank_strength : float
         Weight of the nuclear norm of the matrix (frame, pixel); joins the frames likewise.
     tikhonov_strength : "auto" or float
