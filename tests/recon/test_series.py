@@ -9,7 +9,7 @@ from recon.axes import LabelledArray
 from recon.phantom import Ellipse, ellipse_kspace, ring_coils
 from recon.pipeline import Reconstruction, reconstruct
 from recon.scan import Scan
-from recon.settings import Settings, parse_settings
+from recon.settings import parse_settings
 from tests.recon.helpers import Array, complex_normal, numpy_inverse
 from tests.recon.scans import OBJECT, PHASE
 
