@@ -60,6 +60,7 @@ class Trial:
                 max_iterations=MAX_ITERATIONS,
                 start=self.start,
                 callback=self.callback,
+                is_real=self.problem.constraint == "real",
             )
         else:
             problem = replace(self.problem, **dict[str, Any](strengths))

@@ -75,7 +75,11 @@ def test_every_method_combination_and_map_kind(method: str, combination: str, ma
         found.scan, parse_settings({"method": method, "combination": combination, "coil_maps": maps})
     )
     # adaptive maps leave more unexplained, which held-out lines answer with more of Tikhonov's damping
-    limits = {"zero-filled": 0.35, "tikhonov": 0.16 if maps == "adaptive" else 0.08, "compressed-sensing": 0.08}
+    limits = {
+        "zero-filled": 0.35,
+        "tikhonov": 0.16 if maps == "adaptive" else 0.08,
+        "compressed-sensing": 0.08,
+    }
     assert error(result.image, found) < limits[method]
     assert result.report["settings"]["method"] == method
     if combination == "root-sum-of-squares":
