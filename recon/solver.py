@@ -41,11 +41,13 @@ from recon.shifts import ShiftedWavelets, shift_set
 
 #: dual steps for each proximal map to begin with: on simulated scans of two heads, fifteen saved no iteration.
 DUAL_STEPS: Final = 1
+#: the same where the field has three components: frames far apart in the chain hear of each other step by step.
+DUAL_STEPS_OF_THREE: Final = 6
 #: one step more whenever the optimality has not fallen by a fifth in this many iterations; and no more than so many.
 PATIENCE: Final = 10
 MOST_DUAL_STEPS: Final = 4
-#: the same where wavelet terms have dual fields too.
-MOST_DUAL_STEPS_WITH_SHIFTS: Final = 12
+#: the same where wavelet terms have dual fields too, or the field has three components: four do not converge there.
+MOST_DUAL_STEPS_OF_MANY: Final = 12
 #: step of the dual gradient as a fraction of 1 / ||K||^2, K being all operators inside the dual terms; 2 is its limit.
 DUAL_STEP: Final = 1.9
 
@@ -195,7 +197,7 @@ class _Iteration:
                 self._projected(array)  # a start may come from a problem without the constraint
         self.hx = self._normal(self.x)
         self.x_before, self.hx_before = self.x, self.hx
-        self.dual_steps = DUAL_STEPS
+        self.dual_steps = DUAL_STEPS if len(self.p) == 2 else DUAL_STEPS_OF_THREE
         self.is_greedy, self.t = True, 1.0
         self.best, self.since_best = np.inf, 0
         self.iterations = 0
@@ -272,7 +274,8 @@ class _Iteration:
         if self.optimality < 0.8 * self.best:
             self.best, self.since_best = self.optimality, 0
         elif self.since_best >= PATIENCE:
-            most = MOST_DUAL_STEPS if self.shifted is None else MOST_DUAL_STEPS_WITH_SHIFTS
+            is_simple = self.shifted is None and len(self.p) == 2
+            most = MOST_DUAL_STEPS if is_simple else MOST_DUAL_STEPS_OF_MANY
             self.is_greedy = self.is_greedy and self.dual_steps < MOST_DUAL_STEPS
             self.dual_steps, self.since_best = min(self.dual_steps + 1, most), 0
         is_uphill = restart > 0
