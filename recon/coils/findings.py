@@ -70,7 +70,7 @@ def map_findings(figures: Mapping[int, MapFigures], axis: str = "slice") -> list
     axis : str
         What a slice is called: `x` for the readout positions of a volume.
     """
-    planes = "slice(s)" if axis == "slice" else f"{axis} position(s)"
+    planes = "slice(s)" if axis == "slice" else "readout position(s)"
     shares = {position: each.object_share for position, each in figures.items()}
     poor = {position: share for position, share in shares.items() if share < 1 - LARGEST_SHARE_LEFT_OUT}
     found: list[Finding] = []

@@ -171,7 +171,7 @@ class MapMaker:
                 kernel=found.kernel,
                 subspace=found.subspace,
                 threshold=found.threshold,
-                folded_share=self._share_of_object(blocks, is_folded),
+                folded_share=self._share_of_object(blocks, is_folded, without_object=0.0),
             )
         share = self._object_share(calibration, blocks, np.any(sets != 0, axis=(0, 1)))
         return self._scaled(sets, replace(figures, object_share=share, sets=len(sets)))
@@ -188,13 +188,15 @@ class MapMaker:
             return CoilMaps(virtual[0], whitened[0], figures)
         return CoilMaps(np.stack(virtual), np.stack(whitened), figures)
 
-    def _share_of_object(self, blocks: list[NDArray[Any]], where: NDArray[np.bool_]) -> float:
+    def _share_of_object(
+        self, blocks: list[NDArray[Any]], where: NDArray[np.bool_], *, without_object: float
+    ) -> float:
         is_object = object_pixels(
             blocks, OBJECT_LEVEL, has_noise_units=self.whitening.has_noise_units, largest=self.largest
         )
         covered = nearest(where, is_object.shape)[is_object]
         # a few pixels are chance, in a slice without an object
-        return float(covered.mean()) if covered.size > SMALLEST_OBJECT * is_object.size else 1.0
+        return float(covered.mean()) if covered.size > SMALLEST_OBJECT * is_object.size else without_object
 
     def _object_share(
         self, calibration: Calibration, blocks: list[NDArray[Any]], inside: NDArray[np.bool_]
@@ -202,7 +204,7 @@ class MapMaker:
         # gaps in the calibration would show the object where it is not
         if inside.all() or not calibration.is_full:
             return 1.0
-        return self._share_of_object(blocks, inside)
+        return self._share_of_object(blocks, inside, without_object=1.0)
 
     def _supplied(self, position: int, calibration: Calibration, blocks: list[NDArray[Any]]) -> CoilMaps:
         physical = self.scan.sensitivity(position)

@@ -127,9 +127,13 @@ def test_the_report_stays_small_and_names_readout_positions() -> None:
 def test_positions_beyond_the_ends_of_the_object_are_no_fault_of_the_maps() -> None:
     found = volume((20, 22, 40))
     report = reconstruct(found.scan, QUICK.model_copy(update={"max_iterations": 1})).report
-    shares = [each["object_share"] for each in report["preparation"]["coil_maps"]["slices"]]
+    slices = report["preparation"]["coil_maps"]["slices"]
+    shares = [each["object_share"] for each in slices]
     assert shares[:4] == [1.0] * 4
     assert min(shares) < 1.0
+    # nor does an object fold over where there is none
+    assert [each["folded_share"] for each in slices[:4]] == [0.0] * 4
+    assert "object-exceeds-field-of-view" not in [finding["code"] for finding in report["findings"]]
 
 
 def test_residual_of_a_volume_is_as_large_as_its_noise() -> None:
