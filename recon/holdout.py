@@ -52,6 +52,30 @@ def held_out_samples(
     return np.asarray(mask & (shaped[:, np.newaxis] if is_lines else shaped))
 
 
+def held_out_of_frames(
+    masks: list[NDArray[np.bool_]], fraction: float, rng: np.random.Generator, *, fewest: int = 1
+) -> list[NDArray[np.bool_]]:
+    """Choose measured positions to be kept out of each frame of a series, see `held_out_samples`.
+
+    Frames that all measure the same positions lose the same ones: else each would be told by the others what the scan
+    itself leaves out of all of them, and tying frames together would seem to be worth more than it is.
+
+    Parameters
+    ----------
+    masks : list of bool (rows, columns)
+        At least one.
+    fraction, rng, fewest
+        As for `held_out_samples`.
+
+    Returns
+    -------
+    list of bool (rows, columns)
+    """
+    if all(np.array_equal(mask, masks[0]) for mask in masks[1:]):
+        return [held_out_samples(masks[0], fraction, rng, fewest=fewest)] * len(masks)
+    return [held_out_samples(mask, fraction, rng, fewest=fewest) for mask in masks]
+
+
 def _one_of_each_stratum(places: int, count: int, rng: np.random.Generator) -> NDArray[np.intp]:
     edges = np.linspace(0, places, count + 1)
     low = np.ceil(edges[:-1]).astype(np.intp)

@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from recon.coils.maps import CoilMaps
-from recon.holdout import held_out_samples
+from recon.holdout import held_out_of_frames
 from recon.linear import tikhonov
 from recon.parallel import in_order
 from recon.preparation import Plane, Preparation
@@ -166,7 +166,7 @@ def make_trial(
     rng: np.random.Generator,
     callback: Callback,
 ) -> Trial | None:
-    held = [held_out_samples(plane.mask, HELD_OUT, rng, fewest=FEWEST) for plane in planes]
+    held = held_out_of_frames([plane.mask for plane in planes], HELD_OUT, rng, fewest=FEWEST)
     if not any(each.any() for each in held):
         return None
     kept = [_without(plane, out) for plane, out in zip(planes, held, strict=True)]

@@ -11,7 +11,7 @@ from hypothesis import strategies as st
 
 from recon.axes import LabelledArray
 from recon.coils.calibration import central_block
-from recon.holdout import held_out_samples
+from recon.holdout import held_out_of_frames, held_out_samples
 from recon.pipeline import Reconstruction, reconstruct
 from recon.settings import parse_settings
 from recon.strength_search import vertex
@@ -55,6 +55,18 @@ def test_nothing_is_kept_out_where_there_is_too_little() -> None:
     mask[10:22] = True
     mask[[2, 28]] = True
     assert not held_out_samples(mask, 0.2, np.random.default_rng(0), fewest=3).any()
+
+
+def test_frames_that_measure_the_same_lines_lose_the_same_ones() -> None:
+    same = [line_mask(48, 40, every=2, calibration=12)] * 3
+    held = held_out_of_frames(same, 0.2, np.random.default_rng(0), fewest=3)
+    assert held[0].any()
+    assert all((each == held[0]).all() for each in held)
+    # interleaved frames: each line is measured in another one anyway
+    shifted = [np.roll(line_mask(48, 40, every=3, calibration=0), frame, axis=0) for frame in range(3)]
+    apart = held_out_of_frames(shifted, 0.2, np.random.default_rng(0), fewest=3)
+    assert all((each & mask).sum() == each.sum() > 0 for each, mask in zip(apart, shifted, strict=True))
+    assert len({int(np.flatnonzero(each[:, 0])[0]) % 3 for each in apart}) == 3
 
 
 def test_vertex_of_a_parabola_is_found_and_stays_within_what_was_tried() -> None:
