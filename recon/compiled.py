@@ -1,4 +1,4 @@
-"""How the inner loops are compiled."""
+"""How the inner loops are compiled, and how they see images."""
 
 from __future__ import annotations
 
@@ -6,6 +6,7 @@ from collections.abc import Callable
 from typing import Any, TypeVar
 
 import numba
+import numpy as np
 from numpy.typing import NDArray
 
 #: a float32 view of complex64 numbers: real and imaginary parts interleaved along the last axis.
@@ -21,3 +22,9 @@ def compiled(function: Kernel) -> Kernel:
     except RuntimeError:  # neither folder can be written: compile anew in each process
         made = numba.njit(**options)(function)
     return made
+
+
+def as_slabs(x: NDArray[Any]) -> Real:
+    """A plane or a volume as real numbers with three axes; nothing is copied."""
+    real = x.view(x.real.dtype)
+    return real if real.ndim == 3 else real[np.newaxis]

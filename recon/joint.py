@@ -2,30 +2,17 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
-from typing import Any, Protocol
+from collections.abc import Mapping
+from typing import Any
 
 from recon.joint_full import FullVolumes
 from recon.joint_hybrid import HybridVolumes
 from recon.joint_problem import solve_volume, stack_maps
 from recon.phase import remove_phase
 from recon.preparation import Preparation, Sink
+from recon.progress import Teller
 from recon.report import SolverFigures, build_report
-from recon.scan import PlaneIndex
-from recon.settings import Settings
 from recon.tuning import Choice
-
-
-class Teller(Protocol):
-    """Progress of a job."""
-
-    def __call__(self, stage: str) -> None: ...
-
-    def begin(self, groups: int) -> None: ...
-
-    def finished(self, group: PlaneIndex) -> None: ...
-
-    def iteration(self, group: PlaneIndex, settings: Settings) -> Callable[[int, float], None]: ...
 
 
 def run_joint(

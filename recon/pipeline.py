@@ -27,7 +27,8 @@ from recon.joint import run_joint
 from recon.memory import check_memory
 from recon.parallel import in_order
 from recon.plane import PlaneResult, reconstruct_together
-from recon.preparation import Plane, Preparation, Sink, prepare
+from recon.preparation import Plane, Preparation, Sink
+from recon.prepare import prepare
 from recon.progress import PLANES_DONE, Progress, Teller
 from recon.report import SolverFigures, build_report
 from recon.scan import PlaneIndex, Scan

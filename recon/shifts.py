@@ -15,6 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from recon import kernels
+from recon.compiled import as_slabs
 from recon.operators.wavelet import Wavelet
 
 #: shifts move the grid of every level: multiples of an odd number near a third of the coarsest step.
@@ -74,7 +75,7 @@ class ShiftedWavelets:
         for field, shift in zip(self.fields, self.shifts, strict=True):
             coefficients = self._forward(x, shift)
             kernels.ascend_coefficients(
-                _deep(field), _deep(coefficients), real(step), real(self.radius), self.corner
+                as_slabs(field), as_slabs(coefficients), real(step), real(self.radius), self.corner
             )
         self._collect()
 
@@ -82,7 +83,9 @@ class ShiftedWavelets:
         """The terms' value radius sum_s ||W T_s x||_1, and sum_s Re <q_s, W T_s x>."""
         size, product = 0.0, 0.0
         for field, shift in zip(self.fields, self.shifts, strict=True):
-            length, dot = kernels.coefficient_sums(_deep(field), _deep(self._forward(x, shift)), self.corner)
+            length, dot = kernels.coefficient_sums(
+                as_slabs(field), as_slabs(self._forward(x, shift)), self.corner
+            )
             size, product = size + length, product + dot
         return self.radius * size, product
 
@@ -99,9 +102,3 @@ class ShiftedWavelets:
             image = field.copy()
             self.transform.synthesise(image)
             self.sum += np.roll(image, back, self.axes) if any(shift) else image
-
-
-def _deep(x: NDArray[Any]) -> NDArray[Any]:
-    """As real numbers, with three axes."""
-    real = x.view(x.real.dtype)
-    return real if real.ndim == 3 else real[np.newaxis]

@@ -33,6 +33,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from recon import kernels
+from recon.compiled import as_slabs
 from recon.operators.base import inner, norm
 from recon.operators.encoding import Encoding
 from recon.operators.wavelet import Wavelet
@@ -296,7 +297,7 @@ class _Iteration:
             self._minus_dual(v, x)
             self._prox_exact(x)
             kernels.ascend_dual(
-                p, _deep(x), sigma, self.weights, self.radius, self.slab_radius, self.is_joint
+                p, as_slabs(x), sigma, self.weights, self.radius, self.slab_radius, self.is_joint
             )
             if self.q is not None:
                 self.q = project_spectral(self.q + sigma * x[self.window], self.problem.low_rank_strength)
@@ -304,7 +305,7 @@ class _Iteration:
                 self.shifted.ascend(x, sigma)
         self._minus_dual(v, x)
         cost = self._prox_exact(x)
-        inside, along, product = kernels.variation_sums(p, _deep(x), self.weights, self.is_joint)
+        inside, along, product = kernels.variation_sums(p, as_slabs(x), self.weights, self.is_joint)
         penalty = float(self.radius) * inside + float(self.slab_radius) * along
         if self.q is not None:
             penalty += self.problem.low_rank_strength * nuclear_norm(x[self.window])
@@ -317,7 +318,7 @@ class _Iteration:
     def _minus_dual(self, v: NDArray[Any], out: NDArray[Any]) -> None:
         """out = v - K^H (p, q) / L."""
         inverse = self.real(1 / self.lipschitz)
-        kernels.subtract_divergence(_deep(v), _deep_field(self.p), inverse, self.weights, _deep(out))
+        kernels.subtract_divergence(as_slabs(v), _deep_field(self.p), inverse, self.weights, as_slabs(out))
         if self.q is not None:
             out[self.window] -= inverse * self.q
         if self.shifted is not None:
@@ -330,7 +331,7 @@ class _Iteration:
             np.maximum(inside, 0, out=inside)
         if self.wavelet_strength == 0:
             return 0.0
-        real = _deep(x)
+        real = as_slabs(x)
         slabs, rows, columns = (1, *self.transform.approximation_shape)[-3:]
         if self.encoding.depth == "series":
             slabs = len(real)  # each frame has its own approximation
@@ -373,12 +374,6 @@ class _Iteration:
 def _flat(x: NDArray[Any]) -> NDArray[Any]:
     """All entries as real numbers in one row."""
     return x.reshape(-1).view(x.real.dtype)
-
-
-def _deep(x: NDArray[Any]) -> NDArray[Any]:
-    """A plane or a volume as real numbers with three axes."""
-    real = x.view(x.real.dtype)
-    return real if real.ndim == 3 else real[np.newaxis]
 
 
 def _deep_field(p: NDArray[Any]) -> NDArray[Any]:

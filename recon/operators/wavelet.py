@@ -13,6 +13,7 @@ import numpy as np
 import pywt
 from numpy.typing import NDArray
 
+from recon.compiled import as_slabs
 from recon.operators import filters
 from recon.operators.base import LinearOperator
 
@@ -71,14 +72,8 @@ class Wavelet(LinearOperator):
 
     def analyse(self, x: NDArray[Any]) -> None:
         """`forward` in place."""
-        filters.analyse(_deep(x), *self.filters(x.dtype), self.levels, self.slab_levels)
+        filters.analyse(as_slabs(x), *self.filters(x.dtype), self.levels, self.slab_levels)
 
     def synthesise(self, y: NDArray[Any]) -> None:
         """`adjoint` in place."""
-        filters.synthesise(_deep(y), *self.filters(y.dtype), self.levels, self.slab_levels)
-
-
-def _deep(x: NDArray[Any]) -> NDArray[Any]:
-    """As real numbers, with three axes."""
-    real = x.view(x.real.dtype)
-    return real if real.ndim == 3 else real[np.newaxis]
+        filters.synthesise(as_slabs(y), *self.filters(y.dtype), self.levels, self.slab_levels)

@@ -17,7 +17,8 @@ from recon.formats import open_scan, write_scan
 from recon.inspection import inspect
 from recon.operators.encoding import Encoding
 from recon.pipeline import reconstruct
-from recon.preparation import Preparation, prepare
+from recon.preparation import Preparation
+from recon.prepare import prepare
 from recon.scan import PlaneIndex, Scan
 from recon.settings import Settings, parse_settings
 from tests.recon.helpers import Array, coil_maps, complex_normal
