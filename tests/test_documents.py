@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+import json
 import re
 
 import pytest
 
 from recon.caution import CAUTION
+from recon.settings import Settings
 from tests.readme import ROOT
 
 
@@ -31,3 +33,11 @@ def test_readme_begins_with_exactly_two_commands() -> None:
     )
     commands = [block.strip() for block in re.findall(r"^```sh\n(.*?)^```$", text, re.MULTILINE | re.DOTALL)]
     assert commands == ["deploy/quickstart.sh", "deploy/test.sh"]
+
+
+def test_readme_has_every_setting_with_its_default() -> None:
+    text = (ROOT / "README.md").read_text(encoding="utf-8")
+    section = text.partition("\n## Settings\n")[2].partition("\n## ")[0]
+    rows = re.findall(r"^\| `(\w+)` \| .+ \| `(.+?)` \|$", section, re.MULTILINE)
+    written = [(name, json.loads(default)) for name, default in rows]
+    assert written == list(Settings().model_dump(mode="json").items())
