@@ -101,7 +101,7 @@ def summary(report: Mapping[str, Any]) -> dict[str, Any]:
 
 
 def _shown(value: Any) -> str | None:
-    if value is None:
+    if value is None or value == {}:
         return None
     if isinstance(value, bool):
         return "yes" if value else "no"

@@ -160,4 +160,5 @@ def test_inspect_tells_what_is_odd_and_accepts_it(
     assert main(["inspect", str(tmp_path / "scan.h5")]) == 0
     out = capsys.readouterr().out
     assert words in out
+    assert not [line for line in out.splitlines() if line != line.rstrip()]  # names without anything to say
     assert out.splitlines()[-1] == CAUTION
