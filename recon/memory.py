@@ -46,12 +46,9 @@ def estimate_bytes(scan: Scan, settings: Settings, *, threads: int = 1) -> int:
     coils = scan.coils
     plane_arrays = PLANE_ARRAYS + SECOND_SET_ARRAYS * (settings.map_sets - 1)
     if not scan.is_volume:
-        tied = settings.method == "compressed-sensing" and (
-            settings.temporal_strength != 0 or settings.low_rank_strength != 0
-        )
-        frames = scan.axes.get("frame", 1) if tied else 1
-        plane = coils * frames * int(np.prod(scan.plane_shape)) * _NUMBER
-        return PROGRAM_BYTES + (threads + 1) * plane_arrays * plane
+        frames = _tied_frames(scan, settings)
+        plane = frames * int(np.prod(scan.plane_shape)) * _NUMBER
+        return PROGRAM_BYTES + (threads + 1) * (plane_arrays * coils + _extra_images(settings)) * plane
     grid = image_grid(scan)
     lines, is_complete = _sampled_lines(scan)
     positions = grid.kept[2] if is_complete else grid.encoded[2]
@@ -67,16 +64,31 @@ def estimate_bytes(scan: Scan, settings: Settings, *, threads: int = 1) -> int:
     held = POSITIONS if grid.kept[2] == grid.written[2] else grid.kept[2] + 3 * grid.written[2]
     total += 2 * volumes * written * held
     if settings.volume == "joint":
-        images = JOINT_IMAGES + (PHASE_IMAGES if settings.constraint != "none" else 0)
-        # one of the wavelet terms has no dual field, unless the image is non-negative
-        fields = settings.wavelet_shifts - (settings.constraint != "nonnegative")
-        images += fields + SHIFT_IMAGES if fields > 0 else 0
+        images = JOINT_IMAGES + _extra_images(settings)
         virtual = getattr(settings.coil_compression, "coils", coils)
         # maps and data; of incomplete readouts the residual of all coils takes the place of the data
         total += (2 * virtual + images + (0 if is_complete else coils)) * plane * positions * _NUMBER
     else:
-        total += (threads + 1) * plane_arrays * coils * plane * _NUMBER
+        total += (threads + 1) * (plane_arrays * coils + _extra_images(settings)) * plane * _NUMBER
     return total
+
+
+def _tied_frames(scan: Scan, settings: Settings) -> int:
+    """Frames that are solved as one problem."""
+    is_tied = settings.method == "compressed-sensing" and (
+        settings.temporal_strength != 0 or settings.low_rank_strength != 0
+    )
+    return 1 if scan.is_volume or not is_tied else scan.axes.get("frame", 1)
+
+
+def _extra_images(settings: Settings) -> int:
+    """Images that constraints and cycle spinning take beside the solver's own."""
+    images = PHASE_IMAGES if settings.constraint != "none" else 0
+    if settings.method != "compressed-sensing":
+        return images
+    # one of the wavelet terms has no dual field, unless the image is non-negative
+    fields = settings.wavelet_shifts - (settings.constraint != "nonnegative")
+    return images + (fields + SHIFT_IMAGES if fields > 0 else 0)
 
 
 def _sampled_lines(scan: Scan) -> tuple[int, bool]:
@@ -123,6 +135,18 @@ def check_memory(scan: Scan, settings: Settings, limit_bytes: int | None, *, thr
             )
         detail = f"received joint for a volume that would take {sizes}: {remedy}"
         raise InvalidSettings([{"pointer": "/volume", "detail": detail}])
+    frames = _tied_frames(scan, settings)
+    if frames > 1:
+        names = [name for name in ("temporal_strength", "low_rank_strength") if getattr(settings, name) != 0]
+        alone = settings.model_copy(update=dict.fromkeys(names, 0.0))
+        needed_alone = estimate_bytes(scan, alone, threads=threads)
+        if needed_alone <= limit_bytes:
+            detail = (
+                f"received {getattr(settings, names[0])}, which ties {frames} frames into one problem that would take "
+                f"{sizes}: set {' and '.join(names)} to 0, so that each frame is solved alone "
+                f"({_gigabytes(needed_alone)}), or write fewer frames into one scan"
+            )
+            raise InvalidSettings([{"pointer": f"/{names[0]}", "detail": detail}])
     what = "volume" if scan.is_volume else "scan"
     raise InvalidScan(
         f"this {what} would take {sizes}: use a machine with more memory, or write fewer coils, frames or contrasts "

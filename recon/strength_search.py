@@ -122,7 +122,9 @@ class Search:
             step += 1
             errors[step] = at(step)
         step = 0
-        while errors[step] < errors[step + 1] and step > weakest:
+        while (
+            errors[step] <= errors[step + 1] and step > weakest
+        ):  # equal ones tell of no side: three are needed
             step -= 1
             # a weak solution begun from a strong one lingers there, and would pass for as good
             for trial in self.trials:

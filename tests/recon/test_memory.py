@@ -16,6 +16,7 @@ from recon.memory import PROGRAM_BYTES, check_memory, estimate_bytes
 from recon.pipeline import reconstruct, reconstruct_file
 from recon.scan import Scan
 from recon.settings import Settings, parse_settings
+from tests.recon.scans import example
 from tests.recon.volumes import plane_mask, volume
 
 JOINT = Settings(volume="joint")
@@ -64,6 +65,32 @@ def test_too_large_in_any_way() -> None:
     with pytest.raises(InvalidScan, match="this scan would take"):
         check_memory(slices, Settings(), 10**9)
     check_memory(slices, Settings(), None)
+
+
+def test_a_series_too_long_to_be_tied_can_be_solved_frame_by_frame() -> None:
+    series = Scan(LabelledArray(Unreadable((2000, 8, 128, 128)), ("frame", "coil", "ky", "kx")))
+    expected = r"received auto, which ties 2000 frames .* GB .*set temporal_strength to 0.*\(0\.2\d? GB\)"
+    with pytest.raises(InvalidSettings, match=expected) as caught:
+        reconstruct(series, memory_limit_bytes=10**9)
+    assert [problem["pointer"] for problem in caught.value.errors] == ["/temporal_strength"]
+    with pytest.raises(InvalidSettings, match="set temporal_strength and low_rank_strength to 0"):
+        check_memory(series, parse_settings({"low_rank_strength": 0.1}), 10**9)
+    check_memory(series, parse_settings({"temporal_strength": 0}), 10**9)
+    with pytest.raises(InvalidScan, match="this scan would take"):
+        check_memory(series, Settings(), PROGRAM_BYTES)
+
+
+def test_the_estimate_of_a_series_counts_the_fields_of_cycle_spinning() -> None:
+    found = example((64, 64), coils=1, sizes={"frame": 8})
+    strengths = {"wavelet_strength": 0.1, "tv_strength": 0.1, "temporal_strength": 0.3}
+    settings = parse_settings({**strengths, "wavelet_shifts": 16, "constraint": "real", "max_iterations": 2})
+    reconstruct(example((24, 24), coils=1, sizes={"frame": 2}).scan, settings)
+    tracemalloc.start()
+    reconstruct(found.scan, settings)
+    peak = tracemalloc.get_traced_memory()[1]
+    tracemalloc.stop()
+    estimate = estimate_bytes(found.scan, settings) - PROGRAM_BYTES
+    assert 0.4 * estimate < peak < 1.2 * estimate
 
 
 def test_the_estimate_follows_what_decides() -> None:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import replace
+from typing import cast
 
 import numpy as np
 import pytest
@@ -14,7 +15,7 @@ from recon.coils.calibration import central_block
 from recon.holdout import held_out_of_frames, held_out_samples
 from recon.pipeline import Reconstruction, reconstruct
 from recon.settings import parse_settings
-from recon.strength_search import vertex
+from recon.strength_search import Search, Trial, vertex
 from recon.strengths import TIKHONOV_KNOWN, TV_KNOWN, WAVELET_KNOWN
 from tests.recon.helpers import line_mask
 from tests.recon.scans import Example, example
@@ -73,6 +74,21 @@ def test_vertex_of_a_parabola_is_found_and_stays_within_what_was_tried() -> None
     assert vertex({x: 2 * (x - 0.3) ** 2 + 1 for x in (-1, 0, 1, 2)}) == pytest.approx(0.3)
     assert vertex({0: 3.0, 1: 2.0, 2: 1.0}) == 2
     assert vertex({0: 1.0, 1: 2.0, 2: 2.5}) == 0
+
+
+def test_a_strength_that_changes_nothing_is_searched_without_failing() -> None:
+    class Flat:
+        """A trial whose error does not depend on the strength, as where a wavelet is too long for the image."""
+
+        data, held, start = np.ones((2, 4, 1)), np.ones((4, 1), np.bool_), None
+
+        def error(self, strengths: object) -> float:
+            return 3.0
+
+    search = Search([cast(Trial, Flat())], 1)
+    factor, tried = search.best_factor({"wavelet_strength": 0.1}, ("wavelet_strength",))
+    assert 1 / 2.3 <= min(factor, tried) <= max(factor, tried) <= 2.3
+    assert [trial["held_out_error"] for trial in search.curve] == [3 / 8] * 3
 
 
 @pytest.fixture(scope="module")
