@@ -56,12 +56,19 @@ class SolverFigures:
         return {
             "method": settings.method,
             "strengths": None if self.choice is None else self.choice.as_dict(),
+            "solved_as": self._solved_as(preparation),
             "planes": self.planes if preparation.volume is None else self._of_volume(preparation),
             "converged_planes": sum(plane["stop_reason"] != "iteration-limit" for plane in self.planes),
             "iterations": sum(plane["iterations"] for plane in self.planes),
             "worst_optimality": max((plane["optimality"] for plane in self.planes), default=None),
             "tolerance": settings.tolerance,
         }
+
+    def _solved_as(self, preparation: Preparation) -> str:
+        """What each of the `planes` stands for."""
+        if preparation.is_joint:
+            return "volumes"
+        return "series" if any(plane["frames"] > 1 for plane in self.planes) else "planes"
 
     def _of_volume(self, preparation: Preparation) -> list[dict[str, Any]]:
         """Planes of a volume by their place, the objective's curve of a few: a report stays small."""
@@ -90,7 +97,8 @@ class SolverFigures:
                 Finding(
                     "not-converged",
                     "warning",
-                    f"{len(short)} of {len(self.planes)} planes stopped at {settings.max_iterations} iterations with "
+                    f"{len(short)} of {len(self.planes)} {self._solved_as(preparation)} stopped at "
+                    f"{settings.max_iterations} iterations with "
                     f"optimality {worst:.1e} above the tolerance {settings.tolerance:.1e}: raise max_iterations.",
                     "solver",
                     {"planes": len(short), "optimality": worst},

@@ -96,7 +96,9 @@ def summary(report: Mapping[str, Any]) -> dict[str, Any]:
         "method": report["settings"]["method"],
         "net acceleration": _shown(report["sampling"]["net_acceleration"]),
         "reduced chi-squared": _shown(chi_squared["value"]) if chi_squared else None,
-        "solver": f"{solver['converged_planes']} of {planes} planes converged" if planes else None,
+        "solver": f"{solver['converged_planes']} of {planes} {solver['solved_as']} converged"
+        if planes
+        else None,
     }
 
 

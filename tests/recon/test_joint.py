@@ -69,6 +69,7 @@ def test_joint_equals_the_problem_made_by_hand(is_complete: bool) -> None:
     residual = result.report["consistency"]["reduced_chi_squared"]
     assert 0.5 < residual["value"] < 1.2
     assert result.report["solver"]["converged_planes"] == 1
+    assert result.report["solver"]["solved_as"] == "volumes"
 
 
 def test_joint_is_better_than_planes_at_their_best_strength() -> None:

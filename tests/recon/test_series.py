@@ -75,3 +75,5 @@ def test_temporal_auto_is_resolved_in_the_report(moving: tuple[Scan, Array, Arra
     """What was used is a number in the report's settings."""
     report = reconstruct(moving[0], parse_settings({"temporal_strength": "auto", "max_iterations": 2})).report
     assert report["settings"]["temporal_strength"] > 0
+    messages = {finding["code"]: finding["message"] for finding in report["findings"]}
+    assert messages["not-converged"].startswith("1 of 1 series stopped at 2 iterations")
