@@ -69,13 +69,13 @@ class ShiftedWavelets:
         if known is not None:
             self._collect()
 
-    def ascend(self, x: NDArray[Any], step: float) -> None:
-        """q_s = projection of q_s + step W T_s x onto its ball."""
+    def ascend(self, x: NDArray[Any], step: float, factor: float = 1.0) -> None:
+        """q_s = projection of q_s + step W T_s x onto its ball, whose radius is `factor` times the penalty's."""
         real = x.real.dtype.type
         for field, shift in zip(self.fields, self.shifts, strict=True):
             coefficients = self._forward(x, shift)
             kernels.ascend_coefficients(
-                as_slabs(field), as_slabs(coefficients), real(step), real(self.radius), self.corner
+                as_slabs(field), as_slabs(coefficients), real(step), real(self.radius * factor), self.corner
             )
         self._collect()
 

@@ -49,6 +49,10 @@ PATIENCE: Final = 10
 MOST_DUAL_STEPS: Final = 4
 #: the same where wavelet terms have dual fields too, or the field has three components: four do not converge there.
 MOST_DUAL_STEPS_OF_MANY: Final = 12
+#: a cold start begins with all strengths this much larger, and lets them fall by this factor in each iteration
+#: (continuation: Hale, Yin & Zhang 2008): up to a third of the iterations saved.
+FIRST_FACTOR: Final = 32.0
+FACTOR_DECAY: Final = 0.8
 #: step of the dual gradient as a fraction of 1 / ||K||^2, K being all operators inside the dual terms; 2 is its limit.
 DUAL_STEP: Final = 1.9
 
@@ -198,6 +202,8 @@ class _Iteration:
                 self._projected(array)  # a start may come from a problem without the constraint
         self.hx = self._normal(self.x)
         self.x_before, self.hx_before = self.x, self.hx
+        has_penalty = self.has_dual or self.wavelet_strength > 0
+        self.factor = FIRST_FACTOR if start is None and has_penalty else 1.0
         self.dual_steps = DUAL_STEPS if len(self.p) == 2 else DUAL_STEPS_OF_THREE
         self.is_greedy, self.t = True, 1.0
         self.best, self.since_best = np.inf, 0
@@ -272,7 +278,11 @@ class _Iteration:
         self.optimality = max(stationarity, gap)
         # an inexact proximal map stalls the acceleration in the end: make it more exact when that happens
         self.since_best += 1
-        if self.optimality < 0.8 * self.best:
+        if self.factor > 1:
+            # so far the optimality is that of another problem
+            self.optimality = max(self.optimality, 1.0)
+            self.factor, self.since_best = max(1.0, self.factor * FACTOR_DECAY), 0
+        elif self.optimality < 0.8 * self.best:
             self.best, self.since_best = self.optimality, 0
         elif self.since_best >= PATIENCE:
             is_simple = self.shifted is None and len(self.p) == 2
@@ -292,17 +302,21 @@ class _Iteration:
             x[...] = v
             return x, 0.0, self._prox_exact(x)
         # the dual fields are kept free of the step: they are bounded by the strengths, and enter divided by L
-        p, sigma = _deep_field(self.p), self.real(self.dual_step * self.lipschitz)
+        p, sigma, factor = (
+            _deep_field(self.p),
+            self.real(self.dual_step * self.lipschitz),
+            self.real(self.factor),
+        )
         for _ in range(self.dual_steps):
             self._minus_dual(v, x)
             self._prox_exact(x)
-            kernels.ascend_dual(
-                p, as_slabs(x), sigma, self.weights, self.radius, self.slab_radius, self.is_joint
-            )
+            radius, slab_radius = self.radius * factor, self.slab_radius * factor
+            kernels.ascend_dual(p, as_slabs(x), sigma, self.weights, radius, slab_radius, self.is_joint)
             if self.q is not None:
-                self.q = project_spectral(self.q + sigma * x[self.window], self.problem.low_rank_strength)
+                strength = self.problem.low_rank_strength * self.factor
+                self.q = project_spectral(self.q + sigma * x[self.window], strength)
             if self.shifted is not None:
-                self.shifted.ascend(x, sigma)
+                self.shifted.ascend(x, sigma, self.factor)
         self._minus_dual(v, x)
         cost = self._prox_exact(x)
         inside, along, product = kernels.variation_sums(p, as_slabs(x), self.weights, self.is_joint)
@@ -336,7 +350,8 @@ class _Iteration:
         if self.encoding.depth == "series":
             slabs = len(real)  # each frame has its own approximation
         self.transform.analyse(x)
-        size = kernels.shrink(real, self.real(self.wavelet_strength / self.lipschitz), (slabs, rows, columns))
+        threshold = self.real(self.wavelet_strength * self.factor / self.lipschitz)
+        size = kernels.shrink(real, threshold, (slabs, rows, columns))
         self.transform.synthesise(x)
         return self.wavelet_strength * size
 
