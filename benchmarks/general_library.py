@@ -36,7 +36,8 @@ from recon.operators.base import LinearOperator, norm
 from recon.operators.differences import Differences
 from recon.operators.wavelet import Wavelet
 from recon.penalties import TotalVariation, WaveletL1
-from recon.solver import Problem, solve
+from recon.solver import solve
+from recon.statement import Problem
 
 GAP: Final = 1e-3
 SNR: Final = 40

@@ -27,7 +27,8 @@ from recon.caution import CAUTION
 from recon.operators.encoding import Encoding
 from recon.pipeline import reconstruct
 from recon.settings import Settings
-from recon.solver import Problem, Solution, solve
+from recon.solver import solve
+from recon.statement import Problem, Solution
 
 #: strengths of the linear image.
 TIKHONOV: Final = (0.0003, 0.001, 0.002, 0.005, 0.01, 0.02, 0.05, 0.1, 0.2, 0.5, 1.0, 2.0)

@@ -23,7 +23,8 @@ from benchmarks.scan_files import large_case
 from recon import plane
 from recon.pipeline import reconstruct
 from recon.settings import Settings
-from recon.solver import Problem, solve
+from recon.solver import solve
+from recon.statement import Problem
 
 CLOSE = 3e-3
 SNRS = (30, 80)

@@ -14,7 +14,8 @@ from recon.linear import tikhonov
 from recon.operators.encoding import Encoding
 from recon.preparation import Preparation
 from recon.scan import Scan
-from recon.solver import Problem, Solution, solve
+from recon.solver import solve
+from recon.statement import Problem, Solution
 
 
 @dataclass(frozen=True)

@@ -11,7 +11,7 @@ from scipy.ndimage import uniform_filter
 
 from recon.operators.base import inner, norm
 from recon.operators.encoding import Encoding
-from recon.solver import Solution, StopReason
+from recon.statement import Solution, StopReason
 
 
 def density_weights(mask: NDArray[np.bool_]) -> NDArray[np.float32]:

@@ -18,12 +18,12 @@ import numpy as np
 from numpy.typing import NDArray
 from threadpoolctl import threadpool_limits
 
-from recon.coils.shelf import MapShelf
 from recon.consistency import ResidualFigures
 from recon.errors import InvalidScan
 from recon.formats import ImageWriter, open_scan
 from recon.grid import image_grid
 from recon.joint import run_joint
+from recon.map_shelf import MapShelf
 from recon.memory import check_memory
 from recon.parallel import in_order
 from recon.plane import PlaneResult, reconstruct_together

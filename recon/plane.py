@@ -18,7 +18,8 @@ from recon.linear import density_weights, tikhonov, zero_filled
 from recon.operators.fourier import inverse_transform
 from recon.preparation import Plane, Preparation
 from recon.problem import make_problem, measurement
-from recon.solver import Solution, solve
+from recon.solver import solve
+from recon.statement import Solution
 
 Callback = Callable[[int, float], None]
 

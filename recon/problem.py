@@ -12,7 +12,7 @@ from recon.operators.encoding import Encoding
 from recon.operators.folded import FoldedEncoding
 from recon.phase import remove_phase
 from recon.preparation import Plane, Preparation
-from recon.solver import Problem
+from recon.statement import Problem
 
 
 def measurement(

@@ -14,7 +14,7 @@ from recon.operators.wavelet import Wavelet
 from recon.overfitting import least_squares_findings
 from recon.preparation import Preparation
 from recon.scan import PlaneIndex
-from recon.solver import Solution
+from recon.statement import Solution
 from recon.tuning import Choice
 
 SCHEMA_VERSION: Final = 1

@@ -26,8 +26,7 @@ known gradients: one normal operator for each iteration, and none for the optima
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass, field
-from typing import Any, Final, Literal
+from typing import Any, Final
 
 import numpy as np
 from numpy.typing import NDArray
@@ -35,10 +34,10 @@ from numpy.typing import NDArray
 from recon import kernels
 from recon.compiled import as_slabs
 from recon.operators.base import inner, norm
-from recon.operators.encoding import Encoding
 from recon.operators.wavelet import Wavelet
 from recon.penalties import nuclear_norm, project_spectral
 from recon.shifts import ShiftedWavelets, shift_set
+from recon.statement import Problem, Solution, StopReason
 
 #: dual steps for each proximal map to begin with: on simulated scans of two heads, fifteen saved no iteration.
 DUAL_STEPS: Final = 1
@@ -51,76 +50,16 @@ PATIENCE: Final = 10
 MOST_DUAL_STEPS: Final = 4
 #: the same where wavelet terms have dual fields too, or the field has three components: four do not converge there.
 MOST_DUAL_STEPS_OF_MANY: Final = 12
-#: a cold start begins with all strengths this much larger, and lets them fall by this factor in each iteration
-#: (continuation: Hale, Yin & Zhang 2008): up to a third of the iterations saved.
+#: where convergence is slow, a cold start begins with all strengths this much larger, and lets them fall by this factor
+#: in each iteration (continuation: Hale, Yin & Zhang 2008): up to a third of the iterations saved.
 FIRST_FACTOR: Final = 32.0
 FACTOR_DECAY: Final = 0.8
+#: slow are planes of whole readouts, no more than this part of them measured; others only lose by it.
+SLOW_FRACTION: Final = 0.3
+#: nor is it worth it where the solve is stopped soon.
+FEWEST_ITERATIONS: Final = 50
 #: step of the dual gradient as a fraction of 1 / ||K||^2, K being all operators inside the dual terms; 2 is its limit.
 DUAL_STEP: Final = 1.9
-
-Constraint = Literal["none", "real", "nonnegative"]
-StopReason = Literal["optimal", "iteration-limit", "nothing-to-solve"]
-
-
-@dataclass(frozen=True)
-class Problem:
-    """One plane's problem.
-
-    Attributes
-    ----------
-    encoding : Encoding
-    data : complex ndarray
-        Whitened samples in the range of `encoding` (see `Encoding.to_range`).
-    wavelet : str
-    wavelet_strength, tv_strength, temporal_strength, low_rank_strength : float
-        lambda_w, lambda_t, lambda_f and lambda_r, in noise units; the last two for a series alone.
-    weights : (float, float, float)
-        Weights of the differences along slabs, rows and columns: for a volume whose voxels are not cubes.
-    wavelet_shifts : int
-        S; more than 2^levels shifts do not differ and are left out.
-    constraint : {"none", "real", "nonnegative"}
-        On the image that `encoding` acts on: a phase is taken out of it by `Encoding.absorb`.
-    """
-
-    encoding: Encoding
-    data: NDArray[Any]
-    wavelet: str
-    wavelet_strength: float
-    tv_strength: float
-    temporal_strength: float = 0.0
-    low_rank_strength: float = 0.0
-    weights: tuple[float, float, float] = (1.0, 1.0, 1.0)
-    wavelet_shifts: int = 1
-    constraint: Constraint = "none"
-
-
-@dataclass(frozen=True)
-class Solution:
-    """What the solver returns; not having converged is a value here, not an exception.
-
-    Attributes
-    ----------
-    image : complex ndarray
-        What the problem's encoding acts on, in noise units (see `Encoding.with_phase`).
-    padded, dual, low_rank_dual, shift_duals : ndarray
-        Full primal and dual state, for warm starts.
-    objective : list of float
-        Objective after each iteration.
-    optimality : float
-        Relative optimality residual at the end (see `solve`).
-    iterations : int
-    stop_reason : {"optimal", "iteration-limit", "nothing-to-solve"}
-    """
-
-    image: NDArray[Any]
-    padded: NDArray[Any]
-    dual: NDArray[Any]
-    low_rank_dual: NDArray[Any] | None
-    objective: list[float] = field(repr=False)
-    optimality: float
-    iterations: int
-    stop_reason: StopReason
-    shift_duals: NDArray[Any] | None = None
 
 
 def solve(
@@ -155,7 +94,7 @@ def solve(
     -------
     Solution
     """
-    state = _Iteration(problem, start)
+    state = _Iteration(problem, start, is_long=max_iterations >= FEWEST_ITERATIONS)
     if state.scale == 0.0:
         return state.solution("nothing-to-solve")
     for iteration in range(1, max_iterations + 1):
@@ -173,7 +112,7 @@ class _Iteration:
     Arrays are padded images of three axes (a plane has one slab); the compiled loops see them as real numbers.
     """
 
-    def __init__(self, problem: Problem, start: Solution | None) -> None:
+    def __init__(self, problem: Problem, start: Solution | None, *, is_long: bool = True) -> None:
         encoding = problem.encoding
         self.encoding = encoding
         self.problem = problem
@@ -204,8 +143,8 @@ class _Iteration:
                 self._projected(array)  # a start may come from a problem without the constraint
         self.hx = self._normal(self.x)
         self.x_before, self.hx_before = self.x, self.hx
-        has_penalty = self.has_dual or self.wavelet_strength > 0
-        self.factor = FIRST_FACTOR if start is None and has_penalty else 1.0
+        is_slow = is_long and start is None and self._converges_slowly()
+        self.factor = FIRST_FACTOR if is_slow else 1.0
         few = DUAL_STEPS_OF_NONNEGATIVE if self.is_nonnegative else DUAL_STEPS
         self.dual_steps = few if len(self.p) == 2 else DUAL_STEPS_OF_THREE
         self.is_greedy, self.t = True, 1.0
@@ -251,6 +190,14 @@ class _Iteration:
         squared_norm += 0 if self.shifted is None else len(self.shifted.shifts)
         self.has_dual = squared_norm > 0
         self.dual_step = DUAL_STEP / squared_norm if self.has_dual else 0.0
+
+    def _converges_slowly(self) -> bool:
+        """Whether strengths are worth being lowered step by step from far above their values."""
+        encoding = self.encoding
+        is_lines = encoding.axes == (-2,) and (len(self.shape) == 2 or self.shape[0] == 1)
+        has_penalty = self.has_dual or self.wavelet_strength > 0
+        measured = float(np.mean(encoding.weight != 0))
+        return is_lines and has_penalty and not self.is_real and measured <= SLOW_FRACTION
 
     def step(self) -> None:
         """One accelerated proximal-gradient step with restart, and the optimality residual at its end."""

@@ -15,7 +15,8 @@ from recon.linear import tikhonov
 from recon.parallel import in_order
 from recon.preparation import Plane, Preparation
 from recon.problem import make_problem, measurement
-from recon.solver import Problem, Solution, solve
+from recon.solver import solve
+from recon.statement import Problem, Solution
 
 #: part of the samples outside the calibration region that is kept out, and the fewest lines worth it.
 HELD_OUT: Final = 0.2

@@ -20,12 +20,12 @@ from typing import Any, Final
 import numpy as np
 
 from recon.coils.maps import CoilMaps
-from recon.coils.shelf import MapShelf
+from recon.map_shelf import MapShelf
 from recon.preparation import Plane, Preparation
 from recon.progress import Teller
 from recon.scan import PlaneIndex
 from recon.settings import Settings
-from recon.solver import Solution
+from recon.statement import Solution
 from recon.strength_search import SPATIAL, Callback, Names, Search, Strengths, make_trial, no_callback
 
 #: weight of the held-out minimum against the strengths of known scans, in the logarithm.

@@ -10,7 +10,7 @@ import numpy as np
 from recon.operators.differences import Differences
 from recon.operators.wavelet import Wavelet
 from recon.shifts import shift_set
-from recon.solver import Problem
+from recon.statement import Problem
 from tests.recon.operators import dense
 
 Array = np.ndarray[Any, Any]

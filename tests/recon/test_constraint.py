@@ -18,7 +18,8 @@ from recon.pipeline import reconstruct
 from recon.scan import Scan
 from recon.settings import Settings, parse_settings
 from recon.shifts import shift_set
-from recon.solver import Problem, solve
+from recon.solver import solve
+from recon.statement import Problem
 from tests.recon.general import constrained_optimum
 from tests.recon.helpers import Array, coil_maps, complex_normal, nrmse, numpy_transform
 from tests.recon.scans import example

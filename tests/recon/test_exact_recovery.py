@@ -16,7 +16,8 @@ from recon.phantom import rasterise, shepp_logan
 from recon.pipeline import reconstruct
 from recon.scan import Scan
 from recon.settings import Settings
-from recon.solver import Problem, Solution, solve
+from recon.solver import solve
+from recon.statement import Problem, Solution
 from tests.recon.helpers import Array, nrmse, numpy_inverse, numpy_transform, radial_mask
 
 SIZE = 256

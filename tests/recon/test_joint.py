@@ -12,7 +12,8 @@ from recon.operators.encoding import Encoding
 from recon.pipeline import reconstruct
 from recon.scan import Scan
 from recon.settings import Settings, parse_settings
-from recon.solver import Problem, solve
+from recon.solver import solve
+from recon.statement import Problem
 from tests.recon.helpers import Array, line_mask, nrmse
 from tests.recon.volumes import inverse3, maps3, plane_mask, volume
 

@@ -8,7 +8,8 @@ from recon.operators.encoding import Encoding
 from recon.operators.fourier import transform
 from recon.penalties import soft_threshold
 from recon.phantom import rasterise
-from recon.solver import Problem, solve
+from recon.solver import solve
+from recon.statement import Problem
 from tests.recon.helpers import complex_normal
 from tests.recon.scans import OBJECT
 

@@ -15,7 +15,8 @@ from recon.operators.encoding import Encoding
 from recon.operators.wavelet import Wavelet
 from recon.penalties import TotalVariation
 from recon.phantom import Ellipse, rasterise
-from recon.solver import Problem, Solution, solve
+from recon.solver import solve
+from recon.statement import Problem, Solution
 from tests.recon.helpers import (
     Array,
     coil_maps,

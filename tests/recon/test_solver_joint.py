@@ -13,7 +13,8 @@ from recon.operators.differences import Differences
 from recon.operators.encoding import Encoding
 from recon.operators.wavelet import Wavelet
 from recon.penalties import nuclear_norm, project_spectral
-from recon.solver import Problem, solve
+from recon.solver import solve
+from recon.statement import Problem
 from tests.recon.helpers import coil_maps, complex_normal
 from tests.recon.operators import dense
 
