@@ -11,12 +11,12 @@ from typing import Final
 from recon.settings import Settings
 
 #: lambda_w and lambda_t where the noise is known.
-WAVELET_KNOWN: Final = 0.07
-TV_KNOWN: Final = 0.07
+WAVELET_KNOWN: Final = 0.06
+TV_KNOWN: Final = 0.06
 #: lambda_f, between the frames of a series, where the noise is known.
 TEMPORAL_KNOWN: Final = 0.4
 #: in a series that is tied together, frames stand in for each other, and each needs half of its own penalties.
-SERIES_FACTOR: Final = 0.5
+SERIES_FACTOR: Final = 0.6
 #: weight of 1/2 ||u||^2 where the noise is known.
 TIKHONOV_KNOWN: Final = 0.03
 #: fractions of max |u| of the zero-filled image where the scan is free of noise.

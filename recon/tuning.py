@@ -30,6 +30,8 @@ from recon.strength_search import SPATIAL, Callback, Names, Search, Strengths, m
 
 #: weight of the held-out minimum against the strengths of known scans, in the logarithm.
 TRUST: Final = 0.4
+#: and of the wavelet's share, which so few samples hardly tell.
+SHARE_TRUST: Final = 0.25
 #: the same for Tikhonov's, whose best strengths lie far apart and whose minimum is sharp; and how far to look.
 LINEAR_TRUST: Final = 0.6
 LINEAR_STEPS: Final = 5
@@ -223,6 +225,6 @@ def _combined(known: Strengths, found: Strengths) -> Strengths:
         totals = [sum(of[name] for name in SPATIAL) for of in (known, found)]
         shares = [of["wavelet_strength"] / total for of, total in zip((known, found), totals, strict=True)]
         total = totals[0] ** (1 - TRUST) * totals[1] ** TRUST
-        share = (1 - TRUST) * shares[0] + TRUST * shares[1]
+        share = (1 - SHARE_TRUST) * shares[0] + SHARE_TRUST * shares[1]
         mean |= {"wavelet_strength": share * total, "tv_strength": (1 - share) * total}
     return mean

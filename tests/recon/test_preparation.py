@@ -38,11 +38,13 @@ def with_reference(found: Example, scale: float, *, columns: int | None = None) 
 def test_one_coil_uses_the_map_that_is_supplied(method: str) -> None:
     """A map with a phase of its own takes that phase out of the image, in every method."""
     found = example(coils=1)
-    plain = reconstruct(found.scan, parse_settings({"method": method})).image
+    # held-out lines of one coil tell nothing of the strength
+    settings = parse_settings({"method": method, "tikhonov_strength": 0.03})
+    plain = reconstruct(found.scan, settings).image
     columns = np.linspace(-1, 1, 44)
     map_ = np.exp(1j * columns)[np.newaxis, np.newaxis].repeat(48, axis=1).astype(np.complex64)
     scan = replace(found.scan, sensitivity_array=LabelledArray(map_, ("coil", "y", "x")))
-    mapped = reconstruct(scan, parse_settings({"method": method}))
+    mapped = reconstruct(scan, settings)
     assert mapped.report["settings"]["coil_maps"] == "supplied"
     assert mapped.report["consistency"]["reduced_chi_squared"] is not None
     turned = mapped.image * map_[0]
