@@ -101,6 +101,7 @@ class Search:
         self.curve: list[dict[str, float]] = []
 
     def error(self, strengths: Strengths) -> float:
+        """Mean square over all samples kept out, of all planes; it joins the curve."""
         errors = in_order(lambda trial: trial.error(strengths), self.trials, threads=self.threads)
         error = sum(errors) / self.samples
         self.curve.append({**strengths, "held_out_error": error})
@@ -123,9 +124,8 @@ class Search:
             step += 1
             errors[step] = at(step)
         step = 0
-        while (
-            errors[step] <= errors[step + 1] and step > weakest
-        ):  # equal ones tell of no side: three are needed
+        # equal errors tell of no side, and the parabola needs three
+        while errors[step] <= errors[step + 1] and step > weakest:
             step -= 1
             # a weak solution begun from a strong one lingers there, and would pass for as good
             for trial in self.trials:
@@ -169,6 +169,7 @@ def make_trial(
     rng: np.random.Generator,
     callback: Callback,
 ) -> Trial | None:
+    """A trial on one plane, or on the frames of a series; None where there are too few samples to spare."""
     held = held_out_of_frames([plane.mask for plane in planes], HELD_OUT, rng, fewest=FEWEST)
     if not any(each.any() for each in held):
         return None
@@ -190,4 +191,4 @@ def _without(plane: Plane, held: NDArray[np.bool_]) -> Plane:
 
 
 def no_callback(iteration: int, optimality: float) -> None:
-    return None
+    """Nobody listens."""

@@ -1,7 +1,7 @@
 """What is known of each strength before a scan is seen: values in noise units, best on simulated scans of two heads.
 
 `auto` begins at these and moves with what held-out samples of the scan say (`recon.tuning`); where a scan has none to
-spare, it ends there. The figures and the grid they were chosen from come out of `benchmarks/quality.py`.
+spare, it ends there. `benchmarks/README.md` has the figures.
 """
 
 from __future__ import annotations
@@ -15,7 +15,7 @@ WAVELET_KNOWN: Final = 0.06
 TV_KNOWN: Final = 0.06
 #: lambda_f, between the frames of a series, where the noise is known.
 TEMPORAL_KNOWN: Final = 0.4
-#: in a series that is tied together, frames stand in for each other, and each needs half of its own penalties.
+#: in a series that is tied together, frames stand in for each other, and each needs less of its own penalties.
 SERIES_FACTOR: Final = 0.6
 #: weight of 1/2 ||u||^2 where the noise is known.
 TIKHONOV_KNOWN: Final = 0.03

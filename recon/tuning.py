@@ -85,6 +85,7 @@ class Choice:
             "known": self.known,
             "minimum": {name: float(f"{value:.4g}") for name, value in self.minimum.items()},
             "trust": LINEAR_TRUST if "tikhonov_strength" in self.known else TRUST,
+            "share_trust": SHARE_TRUST if set(SPATIAL) <= set(self.known) else None,
             "chosen": self.strengths,
         }
 
@@ -112,7 +113,8 @@ def tune(
     names = automatic_names(settings, is_series=len(groups[0]) > 1)
     if not names or preparation.map_method is None:
         return preparation, None
-    asked = [group[:FRAMES] for group in _asked(preparation, groups)]
+    whole = _asked(preparation, groups)
+    asked = [group[:FRAMES] for group in whole]
     callback = tell.search(len(asked), len(groups))
     samples = []
     for group in asked:
@@ -123,10 +125,10 @@ def tune(
     choice = choose_strengths(preparation, names, samples, threads=threads, callback=callback)
     if choice is None:
         return preparation, None
-    is_whole = [
-        len(group) == len(whole) for group, whole in zip(asked, _asked(preparation, groups), strict=True)
+    # a solution of some frames is no start for all of them
+    solutions = [
+        found if len(group) <= FRAMES else None for found, group in zip(choice.solutions, whole, strict=True)
     ]
-    solutions = [found if whole else None for found, whole in zip(choice.solutions, is_whole, strict=True)]
     choice = replace(choice, solutions=solutions, groups=[group[0] for group in asked])
     chosen = preparation.settings.model_copy(update=choice.strengths)
     return replace(preparation, settings=chosen), choice

@@ -123,10 +123,10 @@ def test_chosen_numbers_set_by_hand_give_the_same_image(found: Example, automati
 
 
 def test_choice_does_not_depend_on_the_scale_of_the_data(automatic: Reconstruction) -> None:
-    other = reconstruct(example((64, 60), every=3, noise=0.05, scale=1e4).scan)
+    other = reconstruct(example((64, 60), every=3, noise=0.05, scale=2.0**13).scan)
     chosen = automatic.report["solver"]["strengths"]["chosen"]
-    # rounding may change the number of iterations of a trial
-    assert other.report["solver"]["strengths"]["chosen"] == pytest.approx(chosen, rel=0.2)
+    # a power of two changes no digit
+    assert other.report["solver"]["strengths"]["chosen"] == pytest.approx(chosen, rel=0.002)
 
 
 @pytest.mark.parametrize("manual", ["wavelet_strength", "tv_strength"])
